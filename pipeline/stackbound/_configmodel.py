@@ -53,7 +53,7 @@ def _entries(kind: str, source: Registry, default: str | None) -> Any:
     """Return the union of all stages of a kind; each entry is the stage's own options and its name."""
     entries = [_entry(cls, required=cls.name != default) for cls in source.classes(kind)]
     if not entries:
-        reasons = "; ".join(map(str, source.failures))
+        reasons = "; ".join(map(str, source.failures[:3]))
         raise PluginError(f"No {kind} stage could be loaded: {reasons}.", remedy="Install stackbound again.")
     union: Any = entries[0]
     for entry in entries[1:]:

@@ -1,0 +1,201 @@
+"""Reports as people read them: plain text, one fact a line, the same on a terminal and in a file."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Iterable, Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+from .environment import format_size
+
+if TYPE_CHECKING:
+    from ._batch import Outcome
+    from .reports import CompressReport, RestoreReport, VerifyReport
+
+WIDTH = 100
+_LABEL = 12
+
+FIGURE_NAMES = {
+    "max-error": "largest error",
+    "mean-error": "mean error",
+    "rmse": "RMSE",
+    "psnr": "PSNR (dB)",
+    "ssim": "SSIM",
+    "changed-share": "share of pixels changed",
+}
+
+
+def compress(report: CompressReport) -> str:
+    """Return what a run did, or would do."""
+    if report.dry_run:
+        rows = [
+            ("source", _stack(report.kind, report.axes, report.shape, report.dtype, report.source_bytes)),
+            ("tiles", f"{_shape(report.tile)} in regions of {_shape(report.region)}, {report.regions} regions"),
+            ("store", f"about {format_size(report.store_bytes)}, {_ratio(report)}, judged from a sample"),
+            ("promise", report.promise["words"]),
+            ("limits", f"{report.workers} workers, {format_size(report.memory)} of memory"),
+            ("nothing", "was written: this was a dry run."),
+        ]
+        return _block(str(report.store), [*rows, *_notes(report.notes)])
+    rows = [
+        ("source", _stack(report.kind, report.axes, report.shape, report.dtype, report.source_bytes)),
+        ("store", f"{format_size(report.store_bytes)}, {_ratio(report)}"),
+        ("promise", report.promise["words"]),
+        ("found", _found(report.largest_error, report.promise, report.pixels, report.pixels_changed)),
+        ("figures", _figures(report.figures)),
+        ("root", f"{report.root}"),
+        ("", "Keep this line elsewhere: with it anyone can tell later whether the store was replaced."),
+    ]
+    if report.resumed:
+        rows.insert(1, ("resumed", f"{report.resumed} of {report.regions} regions were there already"))
+    return _block(str(report.store), [*rows, *_notes(report.notes)])
+
+
+def batch(outcome: Outcome) -> str:
+    """Return the summary of several sources."""
+    lines = []
+    width = max(len(job.store.name) for job, *_ in outcome.results)
+    for job, report, error, _ in outcome.results:
+        name = job.store.name.ljust(width)
+        if report is None:
+            lines.append(f"  {name}  failed: {error}")
+        elif report.dry_run:
+            lines.append(f"  {name}  about {format_size(report.store_bytes)}, {_ratio(report)}")
+        else:
+            size = f"{format_size(report.store_bytes)}, {_ratio(report)}"
+            lines.append(f"  {name}  {size}, largest error {report.largest_error}")
+            lines.append(f"  {' ' * width}  root {report.root}")
+            lines += [f"  {' ' * width}  note: {note}" for note in report.notes]
+    done = [report for _, report, *_ in outcome.results if report is not None]
+    failed = len(outcome.results) - len(done)
+    total = f"{len(done)} of {len(outcome.results)} sources done"
+    if done:
+        before, after = sum(r.source_bytes for r in done), sum(r.store_bytes for r in done)
+        total += f": {format_size(before)} became {format_size(after)}"
+    if failed:
+        total += f"; {failed} failed"
+    if done and not done[0].dry_run:
+        total += ". Keep the roots elsewhere: with them anyone can tell later whether a store was replaced"
+    return "\n".join([str(outcome.folder), *lines, f"{total}."])
+
+
+def verify(report: VerifyReport) -> str:
+    """Return what a check found, which checks were made, and what they cannot prove."""
+    verdict = "whole and unchanged; its promise stands" if report.ok else "DAMAGED"
+    rows: list[tuple[str, str]] = [("problem", str(problem)) for problem in report.problems]
+    if report.promise is not None:
+        rows.append(("promise", str(report.promise["words"])))
+    if report.largest_error is not None:
+        measured = "measured again now" if report.against else "as recorded when the store was made"
+        rows.append(("error", f"{report.largest_error} at most, {measured}"))
+    rows.append(("decoded", f"{_count(report.pixels)} pixels in {_count(report.regions)} regions"))
+    rows += [("checked", check) for check in report.checks]
+    rows += [("notice", notice) for notice in report.notices]
+    rows += [("not proven", limit) for limit in report.cannot_prove]
+    if report.root is not None:
+        rows.append(("root", report.root))
+    return _block(f"{report.store}: {verdict}", rows)
+
+
+def restore(report: RestoreReport) -> str:
+    """Return what was restored, with the cautions of whoever goes on working with it."""
+    from .storetext import CAUTIONS
+
+    rows = [("stack", _stack(report.kind, report.axes, report.shape, report.dtype, report.bytes))]
+    return _block(str(report.target), [*rows, *_notes(report.notes), *(("caution", text) for text in CAUTIONS[:3])])
+
+
+def plugins(facts: Mapping[str, Any]) -> str:
+    """Return the table of all stages and the plugins that failed to load."""
+    lines = []
+    for kind in dict.fromkeys(stage["kind"] for stage in facts["stages"]):
+        lines.append(kind)
+        for stage in (stage for stage in facts["stages"] if stage["kind"] == kind):
+            origin = "built in" if stage["builtin"] else f"{stage['distribution']} {stage['version']}"
+            lines.append(f"  {stage['name']:<20} {origin:<18} {stage['summary']}".rstrip())
+            if stage["options"]:
+                lines.append(f"  {'':<20} options: {', '.join(stage['options'])}")
+    if not facts["third_party"]:
+        lines.append("Plugins are switched off by STACKBOUND_PLUGINS=off.")
+    if facts["failures"]:
+        lines.append("failed to load")
+        for failure in facts["failures"]:
+            lines.append(f"  {failure['distribution']} {failure['version']} ({failure['plugin']}): {failure['reason']}")
+    return "\n".join(lines)
+
+
+def inspect(facts: Mapping[str, Any]) -> str:
+    """Return the facts about a source or a store."""
+    rows = [(key.replace("_", " "), _value(key, value)) for key, value in facts.items() if value not in (None, "", [])]
+    return _block(str(facts["path"]), [row for row in rows if row[0] not in ("path", "schema version")], label=22)
+
+
+def _value(key: str, value: Any) -> str:
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, int):
+        return f"{format_size(value)} ({_count(value)} bytes)" if key.endswith("bytes") else _count(value)
+    if isinstance(value, float):
+        return f"{value:.4g}"
+    if isinstance(value, Mapping):
+        return ", ".join(f"{name} {_value('', item)}" for name, item in value.items())
+    if isinstance(value, Sequence) and not isinstance(value, str):
+        return ", ".join("unknown" if item is None else _value("", item) for item in value)
+    return str(value)
+
+
+# ------------------------------------------------------------------------------------------------------------- pieces
+
+
+def _block(title: str, rows: Iterable[tuple[str, str]], label: int = _LABEL) -> str:
+    lines = [title]
+    for name, text in rows:
+        lead, rest = f"  {name:<{label}}", " " * (label + 2)
+        lines += textwrap.wrap(
+            text, WIDTH, initial_indent=lead, subsequent_indent=rest, break_long_words=False, break_on_hyphens=False
+        ) or [lead.rstrip()]
+    return "\n".join(lines)
+
+
+def _stack(kind: str, axes: str, shape: Sequence[int], dtype: str, size: int) -> str:
+    named = ", ".join(f"{axis} {length}" for axis, length in zip(axes, shape, strict=True))
+    return f"{kind}; {named}; {dtype}; {format_size(size)}"
+
+
+def _shape(shape: Sequence[int]) -> str:
+    return " x ".join(map(str, shape))
+
+
+def _ratio(report: CompressReport) -> str:
+    if report.ratio >= 1:
+        return f"{report.ratio:.2f} times smaller ({report.bits_per_pixel:.2f} bits per pixel)"
+    return f"{1 / report.ratio:.2f} times larger ({report.bits_per_pixel:.2f} bits per pixel)"
+
+
+def _found(largest: str | None, promise: Mapping[str, Any], pixels: int, changed: int) -> str:
+    bounds = promise["stored"]
+    bound = bounds[0] if len(bounds) == 1 else "the tolerance of each channel"
+    share = f"{100 * changed / pixels:.3g} %" if pixels else "none"
+    return (
+        f"largest error {largest} (allowed: {bound}), read back from disk and compared in all {_count(pixels)} pixels; "
+        f"{share} of them changed"
+    )
+
+
+def _figures(figures: Mapping[str, str]) -> str:
+    return ", ".join(f"{FIGURE_NAMES.get(name, name)} {_short(value)}" for name, value in figures.items()) or "none"
+
+
+def _short(value: str) -> str:
+    try:
+        return f"{float(value):.6g}"
+    except ValueError:
+        return value
+
+
+def _notes(notes: Iterable[str]) -> list[tuple[str, str]]:
+    return [("note", note) for note in notes]
+
+
+def _count(number: int) -> str:
+    return f"{number:,}"

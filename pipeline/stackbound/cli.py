@@ -1,0 +1,218 @@
+"""The command line. Results go to standard output; progress, messages and errors to standard error.
+
+Exit codes: 0 fine; 1 a fault of the program; 2 usage, configuration or unusable input; 3 a promise or an integrity check
+failed; 130 interrupted. Scientific modules are imported inside the commands, so that ``--help`` answers at once.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import shlex
+import sys
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import click
+
+from ._console import ConsoleProgress, exit_code_of, message
+
+__all__ = ["cli", "main", "run"]
+
+CAUTION = (
+    "Research use. The bound limits the change of each stored pixel value; it does not promise that a measurement or a "
+    "diagnosis stays the same. Local regulation, retention rules and qualified clinical review come first."
+)
+
+_SETTINGS = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
+_JSON = click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of text.")
+
+
+def main() -> None:
+    """Run the command line with the arguments of this process, and exit."""
+    sys.exit(run(sys.argv[1:]))
+
+
+def run(arguments: Sequence[str]) -> int:
+    """Run the command line; return the exit code."""
+    try:
+        result = cli.main(list(arguments), prog_name="stackbound", standalone_mode=False)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        # The reader of our output has gone ("stackbound schema | head"): nothing is wrong, and no more can be said.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except BaseException as error:  # noqa: BLE001  # every error ends as a message and an exit code
+        return exit_code_of(error)
+    return result if isinstance(result, int) else 0
+
+
+def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted:
+        import importlib.metadata
+
+        click.echo(f"stackbound {importlib.metadata.version('stackbound')}")
+        context.exit()
+
+
+@click.group(context_settings=_SETTINGS, epilog=CAUTION)
+@click.option("--version", is_flag=True, expose_value=False, is_eager=True, callback=_show_version, help="Show it.")
+def cli() -> None:
+    """Compress image stacks under a maximum error that holds for every pixel, and prove it.
+
+    A store is an OME-Zarr folder (or one .ozx file) with a log of every comparison that was made. Anyone can read it
+    with zarr where stackbound is installed, and verify it again years later.
+    """
+
+
+@cli.command(epilog=CAUTION)
+@click.argument("sources", metavar="SOURCE...", nargs=-1, required=True)
+@click.argument("store", metavar="STORE")
+@click.option(
+    "--tolerance",
+    metavar="N",
+    help="The largest change that any pixel may suffer; 0 stores without loss. Kept exactly as written.",
+)
+@click.option("--unit", metavar="U", help="Unit of the tolerance: stored (stored pixel values, the default).")
+@click.option("--config", metavar="FILE|NAME", help="A TOML file, or the name of a shipped recipe.")
+@click.option("--axes", metavar="A", help="Axes of the source in stored order, such as tzyx, where it does not say.")
+@click.option("--plugin", "plugins", metavar="FILE", multiple=True, help="A Python file with stages; may be repeated.")
+@click.option("--workers", metavar="N", type=click.IntRange(min=1), help="Threads; by default all usable processors.")
+@click.option(
+    "--memory", metavar="SIZE", help="Ceiling, such as 600MiB or 2GB; by default half of what this process may use."
+)
+@click.option("--resume", is_flag=True, help="Continue a run that was interrupted; start where there is none.")
+@click.option("--overwrite", is_flag=True, help="Replace an existing store, once the new one is whole.")
+@click.option("--dry-run", is_flag=True, help="Check everything and say what would be done; write nothing.")
+@_JSON
+def compress(sources: tuple[str, ...], store: str, *, as_json: bool, **options: Any) -> int:
+    """Compress SOURCE into STORE, verify every pixel from disk, and log it.
+
+    SOURCE is a TIFF or NPY file, a folder of single-plane TIFFs or a quoted pattern such as 'plane_*.tif'. STORE ends
+    in .ome.zarr or .ozx. With several sources STORE is a folder, and each source becomes its own store in it.
+    """
+    from . import _batch
+
+    options["command"] = _command_line()
+    jobs, many = _batch.plan(sources, Path(store), overwrite=options["overwrite"], resume=options["resume"])
+    if many:
+        outcome = _batch.compress_all(jobs, options, ConsoleProgress())
+        _print(outcome.to_json, outcome.text, as_json)
+        return outcome.exit_code
+    report = _batch.compress_one(jobs[0], options, ConsoleProgress())
+    _print(report.to_json, lambda: _text().compress(report), as_json)
+    return 0
+
+
+@cli.command()
+@click.argument("store", metavar="STORE")
+@click.option("--against", metavar="SOURCE", help="The original: measure the errors of all pixels again.")
+@click.option("--root", metavar="HEX", help="The root that compress printed, kept elsewhere since.")
+@click.option("--record", metavar="FILE", help="Write a record of this check to a new file outside the store.")
+@_JSON
+def verify(store: str, *, as_json: bool, against: str | None, root: str | None, record: str | None) -> int:
+    """Check that STORE is complete and unchanged and that its promise still stands.
+
+    Nothing inside STORE is written. Without the original this proves that what decodes today is exactly what was
+    compared with the original then. Exit code 3 means damage, and the output names the place.
+    """
+    import stackbound
+
+    source = _one_source(against) if against is not None else None
+    report = stackbound.verify(store, against=source, root=root, record=record, progress=ConsoleProgress())
+    _print(report.to_json, lambda: _text().verify(report), as_json)
+    return 0 if report.ok else 3
+
+
+@cli.command(epilog=CAUTION)
+@click.argument("store", metavar="STORE")
+@click.argument("target", metavar="TARGET")
+@_JSON
+def restore(store: str, target: str, *, as_json: bool) -> int:
+    """Write the stack of STORE as a common image file, with its metadata.
+
+    The ending of TARGET says the format: .ome.tif (.ome.tiff), .tif (.tiff) or .npy. An existing TARGET is never
+    replaced. Every pixel lies within the store's tolerance of the original.
+    """
+    import stackbound
+
+    report = stackbound.restore(store, target, progress=ConsoleProgress())
+    _print(report.to_json, lambda: f"{_text().restore(report)}\n{CAUTION}", as_json)
+    return 0
+
+
+@cli.command()
+@click.argument("path", metavar="PATH")
+@_JSON
+def inspect(path: str, *, as_json: bool) -> int:
+    """Tell what PATH is, a source or a store: axes, shape, pixel type, promise, sizes, versions."""
+    from .inspect import inspect as look
+
+    facts = look(_one_source(path))
+    _print(lambda: facts, lambda: _text().inspect(facts), as_json)
+    return 0
+
+
+@cli.command()
+@_JSON
+def plugins(*, as_json: bool) -> int:
+    """List all stages, where they come from and their options, and every plugin that failed to load."""
+    from .plugins import plugin_report
+
+    facts = plugin_report()
+    _print(lambda: facts, lambda: _text().plugins(facts), as_json)
+    return 0
+
+
+@cli.command()
+def schema() -> int:
+    """Print the JSON Schema of a configuration file, the options of plugins included."""
+    from .config import schema as config_schema
+
+    click.echo(json.dumps(config_schema(), indent=2))
+    return 0
+
+
+@cli.command()
+@click.argument("folder", metavar="[FOLDER]", default="stackbound-demo")
+def demo(folder: str) -> int:
+    """Show the whole way on an invented light-sheet stack of about 100 MB.
+
+    Generates the stack in FOLDER (by default stackbound-demo), compresses, verifies and restores it, and writes a
+    picture of original, decoded and error side by side.
+    """
+    from .demo import demo as run_demo
+
+    report = run_demo(Path(folder), progress=ConsoleProgress())
+    click.echo(_text().demo(report))
+    return 0
+
+
+def _text() -> Any:
+    from . import _text
+
+    return _text
+
+
+def _one_source(argument: str) -> object:
+    """Return the source that one word of the command line means (a file, a folder, a pattern)."""
+    from .errors import UsageError
+    from .sources import expand_sources
+
+    sources = expand_sources([argument])
+    if len(sources) != 1:
+        raise UsageError(f"This means {len(sources)} sources; one is needed.", where=argument)
+    return sources[0]
+
+
+def _command_line() -> str:
+    return shlex.join([Path(sys.argv[0]).name, *sys.argv[1:]])
+
+
+def _print(facts: Callable[[], Mapping[str, Any]], text: Callable[[], str], as_json: bool) -> None:
+    click.echo(json.dumps(facts(), indent=2) if as_json else text())
+
+
+if __name__ == "__main__":
+    main()
