@@ -1,0 +1,145 @@
+"""The promise of a run: the tolerance as the user wrote it, resolved to numbers in stored pixel values."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from decimal import Decimal
+from fractions import Fraction
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from stackbound.errors import ConfigError, IntegrityError
+from stackbound.geometry import Box
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from stackbound.lattice import Tolerance as TileTolerance
+    from stackbound.stages import StackInfo
+    from stackbound.tolerance import Tolerance
+
+Number = int | float
+
+
+@dataclass(frozen=True)
+class Promise:
+    """For every pixel, abs(original - decoded) <= tolerance.
+
+    Attributes
+    ----------
+    value, unit : str
+        The tolerance as the user wrote it.
+    stored : tuple of str
+        In stored pixel values, as decimal strings: one for the whole stack, or one per channel.
+    axes : str
+        Axes of the stack.
+    floats : bool
+        Whether the pixels are floating-point numbers.
+    """
+
+    value: str
+    unit: str
+    stored: tuple[str, ...]
+    axes: str
+    floats: bool
+
+    @property
+    def uniform(self) -> bool:
+        """Whether one number holds for the whole stack."""
+        return len(self.stored) == 1
+
+    @property
+    def numbers(self) -> tuple[Number, ...]:
+        """The tolerances as the coder takes them: whole numbers for integer pixels, never above the decimal."""
+        return tuple(stored_number(text, self.floats) for text in self.stored)
+
+    @property
+    def words(self) -> str:
+        """The promise in one sentence."""
+        bound = self.stored[0] if self.uniform else "the tolerance of its channel (" + ", ".join(self.stored) + ")"
+        sentence = f"For every pixel, abs(original - decoded) <= {bound} in stored pixel values"
+        if self.unit != "stored":
+            sentence += f" (asked for as {self.value} {self.unit})"
+        if all(number == 0 for number in self.numbers):
+            sentence += ": every pixel is kept bit for bit"
+        return sentence + "."
+
+    def pieces(self, box: Box) -> Iterator[tuple[Box, Number]]:
+        """Yield the parts of a box that have one tolerance each, with it."""
+        if self.uniform:
+            yield box, self.numbers[0]
+            return
+        axis = self.axes.index("c")
+        for channel in range(box.start[axis], box.stop[axis]):
+            start = (*box.start[:axis], channel, *box.start[axis + 1 :])
+            stop = (*box.stop[:axis], channel + 1, *box.stop[axis + 1 :])
+            yield Box(start, stop), self.numbers[channel]
+
+    def for_tile(self, start: Sequence[int], shape: Sequence[int]) -> TileTolerance:
+        """Return the tolerance of the tile at `start`: a number, or an array with one entry per channel."""
+        if self.uniform:
+            return self.numbers[0]
+        axis = self.axes.index("c")
+        # A tile at the end of the stack is filled up beyond the last channel.
+        channels = [min(start[axis] + i, len(self.stored) - 1) for i in range(shape[axis])]
+        numbers = [self.numbers[channel] for channel in channels]
+        if len(set(numbers)) == 1:
+            return numbers[0]
+        lengths = [1] * len(shape)
+        lengths[axis] = len(numbers)
+        return np.array(numbers, dtype=np.float64 if self.floats else np.int64).reshape(lengths)
+
+    def record(self) -> dict[str, Any]:
+        """Return the promise as JSON of strings."""
+        return {"words": self.words, "value": self.value, "unit": self.unit, "stored": list(self.stored)}
+
+    @classmethod
+    def from_record(cls, record: Mapping[str, Any], axes: str, dtype: np.dtype[Any]) -> Promise:
+        """Return the promise that `record` was made of.
+
+        Raises
+        ------
+        stackbound.errors.IntegrityError
+            The record is none of a promise.
+        """
+        try:
+            promise = cls(
+                str(record["value"]), str(record["unit"]), tuple(map(str, record["stored"])), axes, dtype.kind == "f"
+            )
+            if not promise.stored or min(promise.numbers) < 0:
+                raise ValueError("no tolerance")
+        except (KeyError, TypeError, ValueError, ArithmeticError) as error:
+            raise IntegrityError("the record of the promise cannot be read") from error
+        return promise
+
+
+def stored_number(text: str, floats: bool) -> Number:
+    """Return a tolerance in stored pixel values as the number that is compared, never above the decimal.
+
+    Integer pixels differ by whole numbers, so that the whole part says the same; floats take the float64 at or below.
+    """
+    exact = Fraction(Decimal(text))
+    if not floats:
+        return math.floor(exact)
+    try:
+        number = float(exact)
+    except OverflowError:
+        return np.finfo(np.float64).max.item()
+    return number if Fraction(number) <= exact else math.nextafter(number, 0.0)
+
+
+def resolve(tolerance: Tolerance, info: StackInfo) -> Promise:
+    """Return the promise that a tolerance means for a stack.
+
+    Raises
+    ------
+    stackbound.errors.ConfigError
+        The unit does not apply to this stack.
+    """
+    floats = info.dtype.kind == "f"
+    if tolerance.unit == "stored":
+        return Promise(str(tolerance.value), "stored", (str(tolerance.value),), info.axes, floats)
+    raise ConfigError(f"The unit '{tolerance.unit}' is not known.", where="tolerance.unit")
