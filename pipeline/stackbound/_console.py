@@ -12,8 +12,8 @@ import click
 from .errors import StackboundError
 
 if TYPE_CHECKING:
-    from rich.progress import TaskID
     from rich.progress import Progress as RichProgress
+    from rich.progress import TaskID
 
 __all__ = ["TRACEBACK", "ConsoleProgress", "exit_code_of", "message"]
 
@@ -60,12 +60,9 @@ def _usage(error: click.UsageError) -> int:
 
 
 def _error(text: str) -> None:
-    click.secho("Error: ", err=True, nl=False, **_red())
+    colour = None if "NO_COLOR" in os.environ else "red"
+    click.secho("Error: ", err=True, nl=False, fg=colour)
     message(text)
-
-
-def _red() -> dict[str, str]:
-    return {"fg": "red"} if "NO_COLOR" not in os.environ else {}
 
 
 class ConsoleProgress:
@@ -80,10 +77,10 @@ class ConsoleProgress:
         if not sys.stderr.isatty():
             return
         from rich.console import Console
-        from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
+        from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
 
         self.end()
-        columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+        columns = (TextColumn("{task.description}"), BarColumn(), TaskProgressColumn(), TimeRemainingColumn())
         self._bar = Progress(*columns, console=Console(stderr=True), transient=True)
         self._task = self._bar.add_task(what, total=total)
         self._bar.start()

@@ -112,9 +112,9 @@ def plugins(facts: Mapping[str, Any]) -> str:
         lines.append(kind)
         for stage in (stage for stage in facts["stages"] if stage["kind"] == kind):
             origin = "built in" if stage["builtin"] else f"{stage['distribution']} {stage['version']}"
-            lines.append(f"  {stage['name']:<20} {origin:<18} {stage['summary']}".rstrip())
+            lines += _wrapped(f"  {stage['name']:<20}", f"{stage['summary']} ({origin})")
             if stage["options"]:
-                lines.append(f"  {'':<20} options: {', '.join(stage['options'])}")
+                lines += _wrapped(" " * 22, f"options: {', '.join(stage['options'])}")
     if not facts["third_party"]:
         lines.append("Plugins are switched off by STACKBOUND_PLUGINS=off.")
     if facts["failures"]:
@@ -150,11 +150,15 @@ def _value(key: str, value: Any) -> str:
 def _block(title: str, rows: Iterable[tuple[str, str]], label: int = _LABEL) -> str:
     lines = [title]
     for name, text in rows:
-        lead, rest = f"  {name:<{label}}", " " * (label + 2)
-        lines += textwrap.wrap(
-            text, WIDTH, initial_indent=lead, subsequent_indent=rest, break_long_words=False, break_on_hyphens=False
-        ) or [lead.rstrip()]
+        lines += _wrapped(f"  {name:<{label}}", text)
     return "\n".join(lines)
+
+
+def _wrapped(lead: str, text: str) -> list[str]:
+    indent = " " * len(lead)
+    return textwrap.wrap(
+        text, WIDTH, initial_indent=lead, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False
+    ) or [lead.rstrip()]
 
 
 def _stack(kind: str, axes: str, shape: Sequence[int], dtype: str, size: int) -> str:

@@ -1,7 +1,7 @@
 """The command line. Results go to standard output; progress, messages and errors to standard error.
 
-Exit codes: 0 fine; 1 a fault of the program; 2 usage, configuration or unusable input; 3 a promise or an integrity check
-failed; 130 interrupted. Scientific modules are imported inside the commands, so that ``--help`` answers at once.
+Exit codes: 0 fine; 1 a fault of the program; 2 usage, configuration or unusable input; 3 a promise or an integrity
+check failed; 130 interrupted. Scientific modules are imported inside the commands, so that ``--help`` answers at once.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from typing import Any
 
 import click
 
-from ._console import ConsoleProgress, exit_code_of, message
+from ._console import ConsoleProgress, exit_code_of
 
 __all__ = ["cli", "main", "run"]
 
@@ -57,7 +57,9 @@ def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> N
 
 
 @click.group(context_settings=_SETTINGS, epilog=CAUTION)
-@click.option("--version", is_flag=True, expose_value=False, is_eager=True, callback=_show_version, help="Show it.")
+@click.option(
+    "--version", is_flag=True, expose_value=False, is_eager=True, callback=_show_version, help="Show the version."
+)
 def cli() -> None:
     """Compress image stacks under a maximum error that holds for every pixel, and prove it.
 
@@ -66,7 +68,7 @@ def cli() -> None:
     """
 
 
-@cli.command(epilog=CAUTION)
+@cli.command(short_help="Compress a source into a store, and verify every pixel.", epilog=CAUTION)
 @click.argument("sources", metavar="SOURCE...", nargs=-1, required=True)
 @click.argument("store", metavar="STORE")
 @click.option(
@@ -105,7 +107,7 @@ def compress(sources: tuple[str, ...], store: str, *, as_json: bool, **options: 
     return 0
 
 
-@cli.command()
+@cli.command(short_help="Check that a store is whole and that its promise stands.")
 @click.argument("store", metavar="STORE")
 @click.option("--against", metavar="SOURCE", help="The original: measure the errors of all pixels again.")
 @click.option("--root", metavar="HEX", help="The root that compress printed, kept elsewhere since.")
@@ -125,7 +127,7 @@ def verify(store: str, *, as_json: bool, against: str | None, root: str | None, 
     return 0 if report.ok else 3
 
 
-@cli.command(epilog=CAUTION)
+@cli.command(short_help="Write a store's stack as a common image file.", epilog=CAUTION)
 @click.argument("store", metavar="STORE")
 @click.argument("target", metavar="TARGET")
 @_JSON
@@ -142,7 +144,7 @@ def restore(store: str, target: str, *, as_json: bool) -> int:
     return 0
 
 
-@cli.command()
+@cli.command(short_help="Tell what a source or a store is.")
 @click.argument("path", metavar="PATH")
 @_JSON
 def inspect(path: str, *, as_json: bool) -> int:
@@ -154,7 +156,7 @@ def inspect(path: str, *, as_json: bool) -> int:
     return 0
 
 
-@cli.command()
+@cli.command(short_help="List the stages and the plugins that failed to load.")
 @_JSON
 def plugins(*, as_json: bool) -> int:
     """List all stages, where they come from and their options, and every plugin that failed to load."""
@@ -165,7 +167,7 @@ def plugins(*, as_json: bool) -> int:
     return 0
 
 
-@cli.command()
+@cli.command(short_help="Print the JSON Schema of a configuration file.")
 def schema() -> int:
     """Print the JSON Schema of a configuration file, the options of plugins included."""
     from .config import schema as config_schema
@@ -174,7 +176,7 @@ def schema() -> int:
     return 0
 
 
-@cli.command()
+@cli.command(short_help="Show the whole way on an invented stack.")
 @click.argument("folder", metavar="[FOLDER]", default="stackbound-demo")
 def demo(folder: str) -> int:
     """Show the whole way on an invented light-sheet stack of about 100 MB.

@@ -28,7 +28,7 @@ def cpus() -> int:
 
 def memory() -> int:
     """Return the bytes of memory that this process may use: the machine's, or less by its control group or limits."""
-    limits = [psutil.virtual_memory().total]
+    limits: list[int] = [psutil.virtual_memory().total]
     for folder in _cgroups("memory"):
         for name in ("memory.max", "memory.limit_in_bytes"):
             text = _read(folder / name)

@@ -100,4 +100,4 @@ class Tolerance(BaseModel):
         return {"value": str(self.value), "unit": self.unit}
 
     def __str__(self) -> str:
-        return str(self.value) if self.unit == "stored" else f"{self.value} {self.unit}"
+        return f"{self.value} {self.unit}"

@@ -121,7 +121,7 @@ def test_a_unit_without_a_tolerance_is_refused():
 
 def test_an_unknown_unit_is_refused():
     """An unknown unit is named together with the known ones."""
-    with pytest.raises(UsageError, match="'pixels'.*stored"):
+    with pytest.raises(UsageError, match=r"'pixels'.*stored"):
         read_config(None, tolerance=1, unit="pixels")
 
 

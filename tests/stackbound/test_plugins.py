@@ -174,7 +174,7 @@ def test_a_missing_stage_is_suggested_and_failed_plugins_are_named(install):
     """The message for an unknown stage gives the nearest name and tells which plugins could not be loaded."""
     install("broken-thing", "broken_thing", "import no_such_module_anywhere")
 
-    with pytest.raises(ConfigError, match="did you mean 'max-error'.*no_such_module_anywhere"):
+    with pytest.raises(ConfigError, match=r"did you mean 'max-error'.*no_such_module_anywhere"):
         registry().get("verify", "max-eror")
 
 
