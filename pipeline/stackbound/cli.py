@@ -187,7 +187,7 @@ def demo(folder: str) -> int:
     from .demo import demo as run_demo
 
     report = run_demo(Path(folder), progress=ConsoleProgress())
-    click.echo(_text().demo(report))
+    click.echo("\n".join(report.lines()))
     return 0
 
 
