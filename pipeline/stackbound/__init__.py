@@ -17,6 +17,7 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from stackbound.config import PipelineConfig as PipelineConfig
+    from stackbound.config import read_config as read_config
     from stackbound.demo import demo as demo
     from stackbound.inspect import inspect as inspect
     from stackbound.opened import StoredStack as StoredStack
@@ -46,6 +47,7 @@ _HOMES = {
     "hookimpl": ("plugins", "hookimpl"),
     "inspect": ("inspect", "inspect"),
     "open": ("opened", "open_store"),
+    "read_config": ("config", "read_config"),
     "restore": ("restore", "restore"),
     "use_plugin": ("plugins", "use_plugin"),
     "verify": ("verify", "verify"),
@@ -64,6 +66,7 @@ __all__ = [
     "hookimpl",
     "inspect",
     "open",
+    "read_config",
     "restore",
     "use_plugin",
     "verify",

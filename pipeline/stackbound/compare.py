@@ -138,7 +138,8 @@ def _magnitudes(original: Pixels, decoded: Pixels) -> Pixels:
     # The unsigned difference modulo 2**bits of the larger minus the smaller is the difference itself.
     unsigned = np.dtype(f"u{original.dtype.itemsize}")
     low, high = np.minimum(original, decoded), np.maximum(original, decoded)
-    return high.view(unsigned) - low.view(unsigned)
+    magnitudes: Pixels = high.view(unsigned) - low.view(unsigned)
+    return magnitudes
 
 
 def _integer_errors(original: Pixels, decoded: Pixels) -> Errors:
@@ -167,8 +168,8 @@ def _sum(values: Pixels) -> int:
 
 
 def _sum_of_squares(magnitudes: Pixels, largest: int) -> int:
-    # Limbs of 16 bits in float64: a block has at most 2**16 products below 2**32, so every partial sum is a whole number
-    # below 2**53 and the fast product of floats is exact in any order.
+    # Limbs of 16 bits in float64: a block has at most 2**16 products below 2**32, so every partial sum is a whole
+    # number below 2**53 and the fast product of floats is exact in any order.
     limbs = [((magnitudes >> shift) & 0xFFFF).astype(np.float64) for shift in range(0, largest.bit_length(), 16)]
     return sum(int(np.dot(a, b)) << (16 * (i + j)) for i, a in enumerate(limbs) for j, b in enumerate(limbs))
 

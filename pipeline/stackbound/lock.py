@@ -134,4 +134,3 @@ def _alive(holder: dict[str, object]) -> bool:
 
 def _name(holder: dict[str, object]) -> str:
     return f"process {holder['process']} on {holder.get('host')}" if "process" in holder else "of another process"
-

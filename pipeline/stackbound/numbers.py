@@ -1,7 +1,7 @@
 """Numbers as the text that the log holds, the same on every machine.
 
-Quotients, roots and logarithms are formed in 50 decimal digits and rounded once to float64: the mathematics library of a
-platform has no say.
+Quotients, roots and logarithms are formed in 50 decimal digits and rounded once to float64: the mathematics library of
+a platform has no say.
 """
 
 from __future__ import annotations

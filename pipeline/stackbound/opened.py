@@ -124,7 +124,9 @@ class StoredStack:
             import dask.array
         except ImportError:
             raise UsageError("dask is not installed.", remedy="pip install 'stackbound[dask]'") from None
-        return dask.array.from_zarr(self.zarr, chunks=self.tile if chunks is None else chunks)
+        return dask.array.from_zarr(  # type: ignore[no-untyped-call]
+            self.zarr, chunks=self.tile if chunks is None else chunks
+        )
 
     def __repr__(self) -> str:
         lengths = ", ".join(f"{axis}={length}" for axis, length in zip(self.axes, self.shape, strict=True))

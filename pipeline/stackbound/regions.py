@@ -128,9 +128,7 @@ class RegionWorker:
         pixels = cut_tile(original, region, tile)
         return encode_tile(self.coder, self.promise, pixels, tile)
 
-    def _compare(
-        self, index: int, box: Box, name: str, original: Pixels, decoded: Pixels, source_hash: str
-    ) -> Result:
+    def _compare(self, index: int, box: Box, name: str, original: Pixels, decoded: Pixels, source_hash: str) -> Result:
         errors, share, over = measure(original, decoded, box, self.promise)
         if over:
             raise PromiseError(
@@ -175,7 +173,7 @@ def read_source(source: OpenSource, info: StackInfo, box: Box) -> Pixels:
         raise PluginError(
             f"The loader raised {type(error).__name__}: {error}.", where=f"region {box}", remedy="Tell its author."
         ) from error
-    if not isinstance(pixels, np.ndarray) or pixels.shape != box.shape or pixels.dtype != info.dtype:
+    if getattr(pixels, "shape", None) != box.shape or pixels.dtype != info.dtype:
         got = f"{getattr(pixels, 'shape', type(pixels).__name__)} {getattr(pixels, 'dtype', '')}"
         raise PluginError(f"The loader returned {got} for {box.shape} {info.dtype}.", where=f"region {box}")
     pixels = np.ascontiguousarray(pixels)

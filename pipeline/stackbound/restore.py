@@ -59,8 +59,9 @@ def restore(
     _check_target(path, stack.path, overwrite)
     # The whole ending stays: savers and the libraries under them look at it.
     suffix = _suffix(path, saver)
-    unfinished = path.with_name(f"{path.name[: len(path.name) - len(suffix)]}.partial{suffix}")
-    _remove(unfinished)
+    unfinished = path.with_name(f"{path.name[: len(path.name) - len(suffix)]}.partial-{os.getpid()}{suffix}")
+    if os.path.lexists(unfinished):
+        raise TargetError("A file is in the way.", where=str(unfinished), remedy="Move it away.")
     watched = progress or Quiet()
     watched.start("restoring", stack.size)
     try:

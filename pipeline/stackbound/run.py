@@ -23,7 +23,7 @@ from stackbound.finish import complete_store
 from stackbound.geometry import counts
 from stackbound.journal import Journal
 from stackbound.plugins import registry, use_plugin
-from stackbound.promise import Promise, resolve
+from stackbound.promise import resolve
 from stackbound.regions import RegionWorker, Result, encode_tile
 from stackbound.reports import CompressReport, Progress, Quiet
 from stackbound.runfile import Clock, write_run_file
@@ -143,7 +143,7 @@ def compress(
 
 
 def _limits(workers: int | None, memory: int | str | None) -> tuple[int, int]:
-    if workers is not None and (isinstance(workers, bool) or not isinstance(workers, int) or workers < 1):
+    if workers is not None and workers < 1:
         raise UsageError(f"{workers!r} workers cannot work.", where="--workers", remedy="Give 1 or more.")
     chosen = environment.cpus() if workers is None else workers
     return chosen, environment.memory() // 2 if memory is None else environment.parse_size(memory)
@@ -152,7 +152,7 @@ def _limits(workers: int | None, memory: int | str | None) -> tuple[int, int]:
 @contextlib.contextmanager
 def _few_threads() -> Iterator[None]:
     # Tiles are what runs side by side; a matrix library that starts threads of its own only disturbs them.
-    from threadpoolctl import threadpool_limits
+    from threadpoolctl import threadpool_limits  # type: ignore[import-untyped]
 
     with threadpool_limits(limits=1, user_api="blas"):
         yield

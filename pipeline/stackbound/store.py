@@ -9,8 +9,8 @@
     stackbound/          group: verification.jsonl, source/ (headers, verbatim), plugins/ (texts of plugin files),
                          README.txt, DECODE.txt, decode.py
 
-Every ``zarr.json`` is written by this module, not by zarr, so that its bytes do not depend on zarr's version; so are the
-shards. Reading goes through zarr.
+Every ``zarr.json`` is written by this module, not by zarr, so that its bytes do not depend on zarr's version; so are
+the shards. Reading goes through zarr.
 """
 
 from __future__ import annotations

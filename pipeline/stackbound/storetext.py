@@ -14,7 +14,8 @@ CAUTIONS = (
     "model result is unchanged. Test yours.",
     "Medical images: follow local law, retention rules, your institution's policy and qualified clinical review before "
     "using or deleting anything. Some uses do not allow lossy copies.",
-    "Never make this the only copy until an independent person has checked the log and your retention period allows it.",
+    "Never make this the only copy until an independent person has checked the log and your retention period allows "
+    "it.",
     "Labels, masks, segmentations, calibration frames and data with few counts per pixel should be stored without loss "
     "(tolerance 0).",
     "If the source was compressed with loss or processed before, errors add up.",
@@ -27,39 +28,46 @@ CAUTIONS = (
 
 def readme(store: Description) -> str:
     """Return the text of README.txt."""
-    info, grid = store.info, store.grid
-    axes = ", ".join(f"{axis} {length}" for axis, length in zip(info.axes, info.shape, strict=True))
-    sections = [
-        ("A stored image stack", f"Written by stackbound {store.version}.\nAxes: {axes}. Pixels: {info.dtype.name}."),
-        (
-            "The promise",
-            store.promise.words
-            + "\nEvery region was decoded again from disk and compared with the source, pixel by pixel, before this store "
-            "got its name. stackbound/verification.jsonl holds the outcome for each region.",
-        ),
-        ("What it does not promise", "\n".join(f"- {caution}" for caution in CAUTIONS)),
-        (
-            "To open",
-            "pip install stackbound zarr\n"
-            'python -c "import zarr; print(zarr.open(PATH_OF_THIS_STORE)[\'0\'].info)"\n'
-            "Programs that read OME-Zarr 0.5 through zarr-python open it as soon as stackbound is installed beside them.\n"
-            f"One tile ({' x '.join(map(str, grid.tile))}) is decoded on its own; one shard file holds "
-            f"{' x '.join(map(str, grid.region))} pixels.\n"
-            "Without stackbound: DECODE.txt beside this file says how the bytes are laid out, and decode.py decodes a tile "
-            "with numpy alone.",
-        ),
-        (
-            "To verify",
-            "stackbound verify PATH_OF_THIS_STORE\n"
-            "stackbound verify PATH_OF_THIS_STORE --against THE_SOURCE\n"
-            "stackbound verify PATH_OF_THIS_STORE --root ROOT_KEPT_ELSEWHERE\n"
-            "The root is the hash in the last line of verification.jsonl. A store that was rewritten whole together with "
-            "its log is recognised only by a root that was kept elsewhere.",
-        ),
-        (
-            "To cite",
-            f"State in the methods section: maximum absolute error {', '.join(store.promise.stored)} (stored pixel values), "
-            f"share of changed pixels (see the log), noise level of the source, stackbound {store.version}.",
-        ),
-    ]
-    return "\n".join(f"{title}\n{'-' * len(title)}\n{text}\n" for title, text in sections)
+    sections = {
+        "A stored image stack": _what(store),
+        "The promise": f"{store.promise.words}\n{_CHECKED}",
+        "What it does not promise": "\n".join(f"- {caution}" for caution in CAUTIONS),
+        "To open": _opening(store),
+        "To verify": _VERIFYING,
+        "To cite": _citing(store),
+    }
+    return "\n".join(f"{title}\n{'-' * len(title)}\n{text}\n" for title, text in sections.items())
+
+
+_CHECKED = """\
+Every region was decoded again from disk and compared with the source, pixel by pixel, before this store got its name.
+stackbound/verification.jsonl holds the outcome for each region."""
+
+_VERIFYING = """\
+stackbound verify PATH_OF_THIS_STORE
+stackbound verify PATH_OF_THIS_STORE --against THE_SOURCE
+stackbound verify PATH_OF_THIS_STORE --root ROOT_KEPT_ELSEWHERE
+The root is the hash in the last line of verification.jsonl. A store that was rewritten whole together with its log is
+recognised only by a root that was kept elsewhere."""
+
+
+def _what(store: Description) -> str:
+    axes = ", ".join(f"{axis} {length}" for axis, length in zip(store.info.axes, store.info.shape, strict=True))
+    return f"Written by stackbound {store.version}.\nAxes: {axes}. Pixels: {store.info.dtype.name}."
+
+
+def _opening(store: Description) -> str:
+    tile, region = (" x ".join(map(str, shape)) for shape in (store.grid.tile, store.grid.region))
+    return f"""\
+pip install stackbound zarr
+python -c "import zarr; print(zarr.open('PATH_OF_THIS_STORE')['0'].info)"
+Programs that read OME-Zarr 0.5 through zarr-python open it as soon as stackbound is installed beside them.
+One tile ({tile}) is decoded on its own; one shard file holds {region} pixels.
+Without stackbound: DECODE.txt beside this file says how the bytes are laid out, and decode.py decodes a tile with numpy
+alone."""
+
+
+def _citing(store: Description) -> str:
+    return f"""\
+State in the methods section: maximum absolute error {", ".join(store.promise.stored)} (stored pixel values), share of
+changed pixels (in the totals of the log), noise level of the source, stackbound {store.version}."""

@@ -31,7 +31,9 @@ NAME = "stackbound.tile"
 FORMAT = 1
 
 
-def codec_configuration(tolerances: tuple[str, ...], stages: Mapping[str, Any], plan: Mapping[str, Any]) -> dict[str, Any]:
+def codec_configuration(
+    tolerances: tuple[str, ...], stages: Mapping[str, Any], plan: Mapping[str, Any]
+) -> dict[str, Any]:
     """Return the configuration of the codec as a store's ``zarr.json`` carries it.
 
     Parameters
@@ -63,7 +65,7 @@ class TileCodec(ArrayBytesCodec):
     @classmethod
     def from_dict(cls, data: Mapping[str, Any]) -> Self:
         """Return the codec that ``zarr.json`` describes."""
-        _, configuration = parse_named_configuration(data, NAME)  # type: ignore[arg-type, misc]
+        _, configuration = parse_named_configuration(data, NAME)
         version = configuration.get("format")
         if version != FORMAT:
             raise UsageError(
@@ -77,11 +79,11 @@ class TileCodec(ArrayBytesCodec):
         """Return name and configuration as they stand in ``zarr.json``."""
         return {"name": NAME, "configuration": json.loads(self.configuration)}
 
-    def evolve_from_array_spec(self, array_spec: ArraySpec) -> Self:  # noqa: ARG002
+    def evolve_from_array_spec(self, array_spec: ArraySpec) -> Self:
         """Return this codec: nothing in it depends on the array."""
         return self
 
-    def validate(self, *, shape: tuple[int, ...], dtype: Any, chunk_grid: Any) -> None:  # noqa: ARG002
+    def validate(self, *, shape: tuple[int, ...], dtype: Any, chunk_grid: Any) -> None:
         """Refuse pixel types that the codec does not hold."""
         _check_dtype(dtype.to_native_dtype())
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import Any
 
 from numpy.typing import NDArray
-
 from stackbound import hookimpl
 from stackbound.compare import errors
 from stackbound.numbers import decimal

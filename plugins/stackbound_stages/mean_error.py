@@ -6,7 +6,6 @@ from fractions import Fraction
 from typing import Any
 
 from numpy.typing import NDArray
-
 from stackbound import hookimpl
 from stackbound.compare import errors
 from stackbound.numbers import decimal
