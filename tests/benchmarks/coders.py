@@ -10,6 +10,7 @@ import time
 from abc import ABC, abstractmethod
 from collections.abc import Mapping
 from dataclasses import dataclass
+from math import prod
 from typing import Any
 
 import jpeg_ls
@@ -18,9 +19,12 @@ import zstandard
 from numpy.typing import NDArray
 from stackbound.config import build, read_config
 from stackbound.errors import StackboundError
+from stackbound.geometry import Box, counts, whole_boxes
 from stackbound.plugins import registry
+from stackbound.regions import cut_tile
+from stackbound.sample import sample_tiles
 from stackbound.tilecodec import TileCoder, decode
-from stacks import Stack, tiles
+from stacks import InMemory, Stack
 
 SHARD_INDEX_ENTRY = 16
 """Bytes per inner chunk in a shard's index: offset and length, 64 bits each (Zarr v3 sharding specification)."""
@@ -63,45 +67,36 @@ class TileCodec(Coder):
 
     def encode(self, stack: Stack, tolerance: float) -> Encoded:
         """Plan on a sample of whole tiles as a run does, then code tile by tile."""
+        shape = stack.pixels.shape
+        whole = Box((0,) * len(shape), shape)
         try:
+            # The shortest decimal that reads back to the same number: what a user would type.
             pipeline = build(read_config(self.config, tolerance=repr(tolerance)), registry())
             self._grid = pipeline.tile.grid(stack.info)
-            boxes = list(tiles(stack.pixels.shape, self._grid.tile))
+            sample = [tile for _, tile in sample_tiles(InMemory(stack), stack.info, self._grid)]
             began = time.process_time()
-            coder = TileCoder(pipeline.predict, pipeline.encode)
-            sample = [self._cut(stack.pixels, boxes[i]) for i in sample_positions(len(boxes))]
-            coder = coder.planned(sample, [tolerance] * len(sample))
+            coder = TileCoder(pipeline.predict, pipeline.encode).planned(sample, [tolerance] * len(sample))
             planning = time.process_time() - began
-            payloads = [coder.encode(self._cut(stack.pixels, box), tolerance) for box in boxes]
+            payloads = [coder.encode(cut_tile(stack.pixels, whole, box), tolerance) for box in self._boxes(shape)]
         except StackboundError as error:
             raise NotPossibleError(str(error)) from error
-        shards = np.prod([-(-n // r) for n, r in zip(stack.pixels.shape, self._grid.region, strict=True)])
-        slots = shards * np.prod([r // t for r, t in zip(self._grid.region, self._grid.tile, strict=True)])
-        index = int(slots) * SHARD_INDEX_ENTRY + int(shards) * SHARD_INDEX_CHECKSUM
+        shards = prod(counts(shape, self._grid.region))
+        slots = shards * prod(counts(self._grid.region, self._grid.tile))
+        index = slots * SHARD_INDEX_ENTRY + shards * SHARD_INDEX_CHECKSUM
         return Encoded(payloads, sum(map(len, payloads)) + index, planning)
 
     def decode(self, stack: Stack, encoded: Encoded) -> NDArray[Any]:
         """Decode tile by tile into the stack."""
         out = np.empty_like(stack.pixels)
-        for box, payload in zip(tiles(out.shape, self._grid.tile), encoded.payloads, strict=True):
-            view = out[box]
+        for box, payload in zip(self._boxes(out.shape), encoded.payloads, strict=True):
+            view = out[box.slices()]
             tile = decode(payload, self._grid.tile, out.dtype)
             view[...] = tile[tuple(slice(n) for n in view.shape)]
         return out
 
-    def _cut(self, pixels: NDArray[Any], box: tuple[slice, ...]) -> NDArray[Any]:
-        """Return one chunk as Zarr stores it: padded with the fill value at the end of the stack."""
-        part = pixels[box]
-        if part.shape == self._grid.tile:
-            return np.ascontiguousarray(part)
-        chunk = np.zeros(self._grid.tile, pixels.dtype)
-        chunk[tuple(slice(n) for n in part.shape)] = part
-        return chunk
-
-
-def sample_positions(count: int) -> list[int]:
-    """Return the tiles on which a plan is made: up to eight, evenly spread."""
-    return sorted({round(i) for i in np.linspace(0, count - 1, min(count, 8) + 2)[1:-1]}) if count > 1 else [0]
+    def _boxes(self, shape: tuple[int, ...]) -> list[Box]:
+        """Return all tiles, whole also where they reach beyond the stack."""
+        return whole_boxes((0,) * len(shape), shape, self._grid.tile)
 
 
 class NearLosslessStandard(Coder):

@@ -65,13 +65,10 @@ def compare(
 ) -> list[Measurement]:
     """Measure every coder at every tolerance, `repeat` times in turn."""
     rows = []
+    about = (stack.name, stack.pixels.shape, str(stack.pixels.dtype), noise)
     for multiple, tolerance in tolerances:
-        here = {
-            c.name: Measurement(
-                stack.name, stack.pixels.shape, str(stack.pixels.dtype), noise, multiple, tolerance, c.name
-            )
-            for c in coders
-        }
+        floor = stack.floor(int(tolerance)) if stack.floor else None
+        here = {c.name: Measurement(*about, multiple, tolerance, c.name, floor=floor) for c in coders}
         for repetition in range(repeat):
             for coder in coders:
                 row = here[coder.name]

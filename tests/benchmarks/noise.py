@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from stackbound_synthetic import Camera
 
 GAUSSIAN_MAD = 1.482602218505602
 """1 / Phi^-1(3/4): turns the median absolute deviation of a Gaussian into its standard deviation."""
@@ -49,3 +51,19 @@ def tolerance_for(noise: float, multiple: float, dtype: np.dtype[Any]) -> int | 
     if dtype.kind == "f":
         return multiple * noise
     return max(1, math.floor(multiple * noise + 0.5))
+
+
+def entropy(camera: Camera, electrons: NDArray[np.float32], *, pixels: int = 2000) -> Callable[[int], float]:
+    """Return a function that gives the mean entropy of the camera's noise, in bits per pixel, at a tolerance.
+
+    Each pixel's grey level falls into bins of ``2 * tolerance + 1`` levels centred on its own noiseless signal; a coder
+    that knew that signal and the camera could not spend less on average. The mean is taken over `pixels` pixels evenly
+    spaced in the order of their brightness, on which the entropy depends smoothly.
+    """
+    order = np.sort(electrons, axis=None)
+    chosen = order[((np.arange(pixels) + 0.5) / pixels * len(order)).astype(np.int64)]
+
+    def floor(tolerance: int) -> float:
+        return float(np.mean([camera.bits(float(e), tolerance) for e in chosen]))
+
+    return floor

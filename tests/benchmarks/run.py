@@ -12,6 +12,7 @@ from __future__ import annotations
 import argparse
 import platform
 import sys
+from collections.abc import Iterator
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -21,7 +22,7 @@ sys.path.insert(0, str(Path(__file__).resolve().parent))
 import report
 from coders import Coder, NearLosslessStandard, RoundShuffleZstd, TileCodec
 from compare import Measurement, compare, noise_tolerances, one_core
-from stacks import find, load
+from stacks import Stack, find, load, synthetic
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -36,10 +37,8 @@ def main(arguments: list[str] | None = None) -> int:
     rows: list[Measurement] = []
     print("\n".join(report.table([])))
     with one_core() as core:
-        for path in find(options.folder):
-            if options.only and path.name not in options.only:
-                continue
-            new = measure(path, coders, options)
+        for stack in chosen_stacks(options):
+            new = measure(stack, coders, options)
             print("\n".join(list(report.table(new))[1:]), flush=True)
             rows += new
     found = report.summaries(rows)
@@ -56,6 +55,7 @@ def parse(arguments: list[str] | None) -> argparse.Namespace:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("folder", type=Path, help="each sub-folder or image file in it is one stack")
     parser.add_argument("--only", action="append", metavar="NAME", help="only this stack (may be repeated)")
+    parser.add_argument("--synthetic", action="store_true", help="with --only: the synthetic camera stacks as well")
     parser.add_argument(
         "--tolerances", default="0,0.5,1,2", metavar="M,M,...", help="multiples of the measured noise [%(default)s]"
     )
@@ -102,9 +102,17 @@ def chosen_coders(options: argparse.Namespace) -> list[Coder]:
     return coders if options.ours_only else [*coders, NearLosslessStandard(), RoundShuffleZstd()]
 
 
-def measure(path: Path, coders: list[Coder], options: argparse.Namespace) -> list[Measurement]:
-    """Load one stack and measure it at all its tolerances."""
-    stack = load(path)
+def chosen_stacks(options: argparse.Namespace) -> Iterator[Stack]:
+    """Yield the stacks of the folder, one in memory at a time, then the synthetic ones."""
+    for path in find(options.folder):
+        if not options.only or path.name in options.only:
+            yield load(path)
+    if options.synthetic or not options.only:
+        yield from synthetic()
+
+
+def measure(stack: Stack, coders: list[Coder], options: argparse.Namespace) -> list[Measurement]:
+    """Measure one stack at all its tolerances."""
     noise, tolerances = noise_tolerances(stack, options.multiples, options.noise.get(stack.name))
     for name, value in (word.rsplit("=", 1) for word in options.extra):
         if name == stack.name:

@@ -1,0 +1,216 @@
+"""The whole command beside the codec alone, growth from 30 MB to 3 GB, and the memory ceiling.
+
+    python tests/benchmarks/whole.py FOLDER [--sizes 30MB,300MB,3GB] [--memory 600MiB]
+
+For each size a synthetic light-sheet stack is written as an uncompressed OME-TIFF (kept in FOLDER for the next time)
+and compressed by the command, which verifies it; then one plane is read from the store. The codec alone codes and
+decodes tiles of the same stack in memory in as many threads as the command has workers.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import shutil
+import sys
+import time
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import Any
+
+sys.path.insert(0, str(Path(__file__).resolve().parent))
+
+import numpy as np
+from process import STACKBOUND, run
+from stackbound.config import build, read_config
+from stackbound.environment import cpus, parse_size
+from stackbound.geometry import whole_boxes
+from stackbound.regions import cut_tile
+from stackbound.sample import sample_tiles
+from stackbound.sources import open_source
+from stackbound.tilecodec import TileCoder, decode
+from stackbound_synthetic import SyntheticStack, light_sheet, write_ome_tiff
+from stacks import InMemory, Stack
+from threadpoolctl import threadpool_limits
+
+TOLERANCE = 2
+PLANE = (1024, 1024)
+TINY = (1, 64, 64)
+"""A stack so small that the memory it takes is that of the interpreter and the libraries."""
+
+
+@dataclass(frozen=True)
+class Whole:
+    """What the command took for one stack; times in seconds, sizes in bytes."""
+
+    pixels: int
+    source_bytes: int
+    store_bytes: int
+    wall: float
+    cpu: float
+    peak: int
+    """Resident size of the process, all threads."""
+    above_libraries: int
+    """The same, less what a tiny stack takes with the same options: interpreter, libraries, compiled kernels."""
+    verify_wall: float
+    verify_above_libraries: int
+    plane_wall: float
+    """Opening the store and reading one plane of it, interpreter and imports apart."""
+    codec_wall: float
+    """Coding and decoding the same tiles in memory, planning included, by as many threads."""
+    codec_cpu: float
+
+
+def main(arguments: list[str] | None = None) -> int:
+    """Measure all sizes; print a table and write JSON."""
+    options = parse(arguments)
+    options.folder.mkdir(parents=True, exist_ok=True)
+    memory = ["--memory", options.memory, "--workers", str(options.workers)]
+    tiny = options.folder / "tiny.ome.tif"
+    write_once(tiny, light_sheet(TINY))
+    store = options.folder / "store.ome.zarr"
+    compress(tiny, store, memory)  # compiles what is not yet cached
+    base = compress(tiny, store, memory).peak
+    base_verify = run([STACKBOUND, "verify", str(store)]).peak
+    print(f"interpreter, libraries, kernels alone: compress {mib(base)} MiB, verify {mib(base_verify)} MiB")
+    print(
+        f"{'pixels':>9}{'wall/Mpx':>10}{'cpu/Mpx':>9}{'ratio':>7}{'peak MiB':>10}{'own MiB':>9}{'verify own':>11}"
+        f"{'plane s':>9}{'codec share of wall':>21}{'of cpu':>8}"
+    )
+    found = []
+    for size in options.sizes:
+        result = measure(options.folder, size, memory, options.workers, base, base_verify)
+        print(line(result), flush=True)
+        found.append(result)
+    content = {
+        "memory": options.memory,
+        "workers": options.workers,
+        "libraries": base,
+        "sizes": [asdict(f) for f in found],
+    }
+    (options.folder / "whole.json").write_text(json.dumps(content, indent=1) + "\n", encoding="utf-8", newline="\n")
+    over = [f for f in found if f.above_libraries > parse_size(options.memory)]
+    for f in over:
+        print(f"ABOVE THE CEILING of {options.memory}: {mib(f.above_libraries)} MiB for {f.source_bytes / 1e6:.0f} MB")
+    return 3 if over else 0
+
+
+def parse(arguments: list[str] | None) -> argparse.Namespace:
+    """Read the command line."""
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("folder", type=Path, help="where stacks and stores go; needs three times the largest size")
+    parser.add_argument("--sizes", default="30MB,300MB,3GB", help="bytes of pixels [%(default)s]")
+    parser.add_argument("--memory", default="600MiB", help="ceiling given to the command [%(default)s]")
+    parser.add_argument("--workers", type=int, default=cpus(), help="threads [%(default)s]")
+    options = parser.parse_args(arguments)
+    options.sizes = [parse_size(size) for size in options.sizes.split(",")]
+    return options
+
+
+def measure(folder: Path, size: int, memory: list[str], workers: int, base: int, base_verify: int) -> Whole:
+    """Measure the command, the verification, a plane and the codec for one size."""
+    depth = max(1, round(size / (2 * 2 * PLANE[0] * PLANE[1])))
+    stack = light_sheet((depth, *PLANE))
+    source, store = folder / f"{size // 10**6}MB.ome.tif", folder / "store.ome.zarr"
+    write_once(source, stack)
+    warm(source)
+    used = compress(source, store, memory)
+    report = json.loads(used.output)
+    checked = run([STACKBOUND, "verify", str(store), "--json"])
+    codec_wall, codec_cpu = codec_alone(stack, source, workers)
+    return Whole(
+        pixels=int(np.prod(stack.shape)),
+        source_bytes=report["source_bytes"],
+        store_bytes=report["store_bytes"],
+        wall=used.wall,
+        cpu=used.cpu,
+        peak=used.peak,
+        above_libraries=max(0, used.peak - base),
+        verify_wall=checked.wall,
+        verify_above_libraries=max(0, checked.peak - base_verify),
+        plane_wall=read_plane(store),
+        codec_wall=codec_wall,
+        codec_cpu=codec_cpu,
+    )
+
+
+def line(w: Whole) -> str:
+    """Return one row of the table."""
+    mpx = w.pixels / 1e6
+    return (
+        f"{mpx:8.0f}M{w.wall / mpx:10.4f}{w.cpu / mpx:9.4f}{w.source_bytes / w.store_bytes:7.2f}{w.peak / 2**20:10.0f}"
+        f"{w.above_libraries / 2**20:9.0f}{w.verify_above_libraries / 2**20:11.0f}{w.plane_wall:9.3f}"
+        f"{w.codec_wall / w.wall:21.0%}{w.codec_cpu / w.cpu:8.0%}"
+    )
+
+
+def mib(size: int) -> str:
+    """Return a size in mebibytes."""
+    return f"{size / 2**20:.0f}"
+
+
+def write_once(path: Path, stack: SyntheticStack) -> None:
+    """Write the stack unless the file is there from an earlier time, whole."""
+    wanted = int(np.prod(stack.shape)) * stack.dtype.itemsize
+    if path.exists() and path.stat().st_size >= wanted:
+        return
+    path.unlink(missing_ok=True)
+    write_ome_tiff(path, stack)
+
+
+def warm(path: Path) -> None:
+    """Read a file once, so that the system's cache holds it where memory allows."""
+    with path.open("rb") as file:
+        while file.read(1 << 24):
+            pass
+
+
+def compress(source: Path, store: Path, memory: list[str]) -> Any:
+    """Run the command into a fresh store."""
+    if store.exists():
+        shutil.rmtree(store)
+    return run([STACKBOUND, "compress", str(source), str(store), "--tolerance", str(TOLERANCE), *memory, "--json"])
+
+
+def read_plane(store: Path) -> float:
+    """Return how long it takes to open a store and read one plane in the middle of it, after the imports."""
+    script = (
+        "import sys, time, stackbound, numba, zarr\n"
+        "began = time.perf_counter()\n"
+        "stack = stackbound.open(sys.argv[1])\n"
+        "plane = stack[0, stack.shape[1] // 2]\n"
+        "print(time.perf_counter() - began)\n"
+    )
+    return float(run([sys.executable, "-c", script, str(store)]).output)
+
+
+def codec_alone(stack: SyntheticStack, source: Path, workers: int, most: int = 64 << 20) -> tuple[float, float]:
+    """Return wall and CPU seconds for coding and decoding, scaled from up to `most` pixels of the stack in memory."""
+    with open_source(source) as opened, threadpool_limits(1):
+        info = opened.info
+        depth = max(1, min(stack.depth, most // int(np.prod(PLANE)) // 2))
+        stop = (*info.shape[:-3], depth, *info.shape[-2:])
+        pixels = opened.read((0,) * len(stop), stop)
+    pipeline = build(read_config(None, tolerance=str(TOLERANCE)))
+    part = Stack("part", type(info)(info.kind, info.axes, pixels.shape, pixels.dtype), pixels)
+    grid = pipeline.tile.grid(part.info)
+    boxes = whole_boxes((0,) * pixels.ndim, pixels.shape, grid.tile)
+    outer = type(boxes[0])((0,) * pixels.ndim, pixels.shape)
+
+    def work() -> None:
+        sample = [tile for _, tile in sample_tiles(InMemory(part), part.info, grid)]
+        coder = TileCoder(pipeline.predict, pipeline.encode).planned(sample, [TOLERANCE] * len(sample))
+        with ThreadPoolExecutor(workers) as pool:
+            payloads = list(pool.map(lambda box: coder.encode(cut_tile(pixels, outer, box), TOLERANCE), boxes))
+            list(pool.map(lambda payload: decode(payload, grid.tile, pixels.dtype), payloads))
+
+    work()  # compiles, and fills the caches
+    scale = float(np.prod(stack.shape)) / pixels.size
+    wall, cpu = time.perf_counter(), time.process_time()
+    work()
+    return (time.perf_counter() - wall) * scale, (time.process_time() - cpu) * scale
+
+
+if __name__ == "__main__":
+    sys.exit(main())
