@@ -27,4 +27,4 @@ def sha256_pixels(pixels: NDArray[Any]) -> str:
     The same as ``hashlib.sha256(pixels.astype(pixels.dtype.newbyteorder("<")).tobytes())``.
     """
     little = np.ascontiguousarray(pixels, dtype=pixels.dtype.newbyteorder("<"))
-    return hashlib.sha256(memoryview(little.reshape(-1).view(np.uint8))).hexdigest()
+    return hashlib.sha256(little.reshape(-1).view(np.uint8).data).hexdigest()
