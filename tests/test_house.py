@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import ast
 import inspect
-import json
 import re
 import subprocess
 import sys
@@ -287,13 +286,6 @@ def test_the_lock_file_holds_every_dependency():
     assert set() == names - {*locked}
     assert "://" not in lock
     assert len(locked) <= lock.count("--hash=sha256:")
-
-
-def test_the_recipes_of_a_schema_are_valid_by_it():
-    """The schema is JSON Schema by its own word and names all tables."""
-    text = json.dumps(schema())
-
-    assert "json-schema.org" in text
 
 
 # ------------------------------------------------------------------------------------------------------------- tools

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -56,7 +56,7 @@ class Outcome:
         return _text.batch(self)
 
 
-def plan(words: tuple[str, ...], store: Path, *, overwrite: bool, resume: bool) -> tuple[list[Job], bool]:
+def plan(words: Sequence[str], store: Path, *, overwrite: bool, resume: bool) -> tuple[list[Job], bool]:
     """Return the jobs that the words of the command line mean, and whether they are several sources for a folder.
 
     Raises

@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from rich.progress import Progress as RichProgress
     from rich.progress import TaskID
 
-__all__ = ["TRACEBACK", "ConsoleProgress", "exit_code_of", "message"]
+__all__ = ["TRACEBACK", "ConsoleProgress", "announce_compilation", "exit_code_of", "message"]
 
 TRACEBACK = "STACKBOUND_TRACEBACK"
 """Environment variable: any value prints the traceback of an error beside its message."""
@@ -63,6 +63,25 @@ def _error(text: str) -> None:
     colour = None if "NO_COLOR" in os.environ else "red"
     click.secho("Error: ", err=True, nl=False, fg=colour)
     message(text)
+
+
+def announce_compilation() -> None:
+    """Say so when numba compiles a kernel in this process, which happens at the first use after an installation."""
+    from numba.core import event
+
+    class Announcer(event.Listener):  # type: ignore[misc]  # numba has no types
+        told = False
+
+        def on_start(self, _: object) -> None:
+            if not self.told:
+                self.told = True
+                message("Compiling for this processor. This happens once after an installation and takes a while.")
+
+        def on_end(self, _: object) -> None:
+            pass
+
+    # numba raises this event only where its cache holds nothing, so the message is true whenever it comes.
+    event.register("numba:compile", Announcer())
 
 
 class ConsoleProgress:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import shutil
+import sys
 import textwrap
 from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
@@ -12,7 +14,7 @@ if TYPE_CHECKING:
     from ._batch import Outcome
     from .reports import CompressReport, RestoreReport, VerifyReport
 
-WIDTH = 100
+_WIDTH = 100
 _LABEL = 12
 
 FIGURE_NAMES = {
@@ -126,8 +128,18 @@ def plugins(facts: Mapping[str, Any]) -> str:
 
 def inspect(facts: Mapping[str, Any]) -> str:
     """Return the facts about a source or a store."""
-    rows = [(key.replace("_", " "), _value(key, value)) for key, value in facts.items() if value not in (None, "", [])]
-    return _block(str(facts["path"]), [row for row in rows if row[0] not in ("path", "schema version")], label=22)
+    rows = []
+    for key, value in facts.items():
+        unknown = value in (None, "", []) or (isinstance(value, list) and all(item is None for item in value))
+        if key in ("schema_version", "path", "axes") or unknown:
+            continue
+        if key == "notes":
+            rows += _notes(value)
+        elif key in ("shape", "tile", "region"):
+            rows.append((key, _named(facts["axes"], value)))
+        else:
+            rows.append((key.replace("_", " "), _value(key, value)))
+    return _block(str(facts["path"]), rows, label=26)
 
 
 def _value(key: str, value: Any) -> str:
@@ -156,14 +168,19 @@ def _block(title: str, rows: Iterable[tuple[str, str]], label: int = _LABEL) -> 
 
 def _wrapped(lead: str, text: str) -> list[str]:
     indent = " " * len(lead)
+    width = min(_WIDTH, shutil.get_terminal_size().columns) if sys.stdout.isatty() else _WIDTH
+    width = max(width, len(lead) + 20)
     return textwrap.wrap(
-        text, WIDTH, initial_indent=lead, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False
+        text, width, initial_indent=lead, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False
     ) or [lead.rstrip()]
 
 
 def _stack(kind: str, axes: str, shape: Sequence[int], dtype: str, size: int) -> str:
-    named = ", ".join(f"{axis} {length}" for axis, length in zip(axes, shape, strict=True))
-    return f"{kind}; {named}; {dtype}; {format_size(size)}"
+    return f"{kind}; {_named(axes, shape)}; {dtype}; {format_size(size)}"
+
+
+def _named(axes: str, shape: Sequence[int]) -> str:
+    return ", ".join(f"{axis} {length}" for axis, length in zip(axes, shape, strict=True))
 
 
 def _shape(shape: Sequence[int]) -> str:

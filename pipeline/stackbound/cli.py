@@ -16,7 +16,7 @@ from typing import Any
 
 import click
 
-from ._console import ConsoleProgress, exit_code_of
+from ._console import ConsoleProgress, announce_compilation, exit_code_of
 
 __all__ = ["cli", "main", "run"]
 
@@ -69,8 +69,7 @@ def cli() -> None:
 
 
 @cli.command(short_help="Compress a source into a store, and verify every pixel.", epilog=CAUTION)
-@click.argument("sources", metavar="SOURCE...", nargs=-1, required=True)
-@click.argument("store", metavar="STORE")
+@click.argument("words", metavar="SOURCE... STORE", nargs=-1, required=True)
 @click.option(
     "--tolerance",
     metavar="N",
@@ -88,7 +87,7 @@ def cli() -> None:
 @click.option("--overwrite", is_flag=True, help="Replace an existing store, once the new one is whole.")
 @click.option("--dry-run", is_flag=True, help="Check everything and say what would be done; write nothing.")
 @_JSON
-def compress(sources: tuple[str, ...], store: str, *, as_json: bool, **options: Any) -> int:
+def compress(words: tuple[str, ...], *, as_json: bool, **options: Any) -> int:
     """Compress SOURCE into STORE, verify every pixel from disk, and log it.
 
     SOURCE is a TIFF or NPY file, a folder of single-plane TIFFs or a quoted pattern such as 'plane_*.tif'. STORE ends
@@ -96,6 +95,10 @@ def compress(sources: tuple[str, ...], store: str, *, as_json: bool, **options: 
     """
     from . import _batch
 
+    if len(words) < 2:
+        raise click.UsageError("Missing STORE: give at least one SOURCE, and the STORE to write.")
+    *sources, store = words
+    announce_compilation()
     options["command"] = _command_line()
     jobs, many = _batch.plan(sources, Path(store), overwrite=options["overwrite"], resume=options["resume"])
     if many:
@@ -121,6 +124,7 @@ def verify(store: str, *, as_json: bool, against: str | None, root: str | None, 
     """
     import stackbound
 
+    announce_compilation()
     source = _one_source(against) if against is not None else None
     report = stackbound.verify(store, against=source, root=root, record=record, progress=ConsoleProgress())
     _print(report.to_json, lambda: _text().verify(report), as_json)
@@ -139,6 +143,7 @@ def restore(store: str, target: str, *, as_json: bool) -> int:
     """
     import stackbound
 
+    announce_compilation()
     report = stackbound.restore(store, target, progress=ConsoleProgress())
     _print(report.to_json, lambda: f"{_text().restore(report)}\n{CAUTION}", as_json)
     return 0
@@ -186,6 +191,7 @@ def demo(folder: str) -> int:
     """
     from .demo import demo as run_demo
 
+    announce_compilation()
     report = run_demo(Path(folder), progress=ConsoleProgress())
     click.echo("\n".join(report.lines()))
     return 0

@@ -47,7 +47,7 @@ class StackboundError(Exception):
 
     def __str__(self) -> str:
         head = f"{self.where}: {self.what}" if self.where else self.what
-        return " ".join(part for part in (head, self.left, self.remedy) if part)
+        return " ".join(_sentence(part) for part in (head, self.left, self.remedy) if part)
 
     def at(self, where: str) -> StackboundError:
         """Return this error with `where` put before the place that it already names."""
@@ -57,6 +57,10 @@ class StackboundError(Exception):
     def __reduce__(self) -> tuple[object, ...]:
         # Keyword-only arguments: the default would call the class with `args` alone and lose the place (process pools).
         return (_rebuild, (type(self), self.what, self.where, self.left, self.remedy))
+
+
+def _sentence(text: str) -> str:
+    return text if text[-1] in ".?!" else f"{text}."
 
 
 def _rebuild(

@@ -321,7 +321,7 @@ def test_an_unwritable_target_is_one_message(here, capfd, target):
         (["compres"], "compres"),
         (["verify", "missing.ome.zarr"], "no such store"),
         (["verify", "embryo.tif"], "not a store"),
-        (["restore", "missing.ome.zarr", "again.tif"], "no such store"),
+        (["restore", "missing.ome.zarr", "again.tif"], "missing.ome.zarr"),
         (["inspect", "missing.tif"], "missing.tif"),
         (["inspect", "no*.tif"], "no*.tif"),
     ],
