@@ -100,6 +100,19 @@ def summary_table(found: Sequence[dict[str, Any]], against: str = STANDARD) -> I
         )
 
 
+def floor_table(rows: Sequence[Measurement]) -> Iterable[str]:
+    """Yield, per synthetic stack and coder, the bits per pixel above the entropy of the known noise."""
+    known = [r for r in rows if r.floor is not None and r.multiple is not None and not math.isnan(r.bits)]
+    if not known:
+        return
+    yield "bits per pixel above the entropy of the known noise in bins centred on the known signal, at multiples of it"
+    for stack, coder in dict.fromkeys((r.stack, r.coder) for r in known):
+        cells = [
+            f"{r.multiple:g}: {r.bits - (r.floor or 0):+.3f}" for r in known if (r.stack, r.coder) == (stack, coder)
+        ]
+        yield f"{stack[:30]:32}{coder:14}{'  '.join(cells)}"
+
+
 def write_json(path: Path, rows: Sequence[Measurement], about: dict[str, Any], **more: Any) -> None:
     """Write everything that was measured."""
     content = {"schema_version": 1, "about": about, "measurements": [_without_nan(asdict(r)) for r in rows], **more}

@@ -10,6 +10,7 @@ one run.
 from __future__ import annotations
 
 import argparse
+import json
 import platform
 import sys
 from collections.abc import Iterator
@@ -20,6 +21,7 @@ from typing import Any
 sys.path.insert(0, str(Path(__file__).resolve().parent))
 
 import report
+import whole
 from coders import Coder, NearLosslessStandard, RoundShuffleZstd, TileCodec
 from compare import Measurement, compare, noise_tolerances, one_core
 from stacks import Stack, find, load, synthetic
@@ -42,12 +44,19 @@ def main(arguments: list[str] | None = None) -> int:
             print("\n".join(list(report.table(new))[1:]), flush=True)
             rows += new
     found = report.summaries(rows)
-    print("\n" + "\n".join(report.summary_table(found)))
+    for lines in (report.summary_table(found), report.floor_table(rows)):
+        print("\n" + "\n".join(lines))
     options.out.mkdir(parents=True, exist_ok=True)
+    code = 3 if any(r.note.startswith("BROKEN") for r in rows) else 0
+    more = {}
+    if options.whole:
+        print("\nthe whole command on synthetic stacks")
+        code = max(code, whole.main([str(options.whole), "--sizes", "30MB,300MB,3GB" if options.growth else "30MB"]))
+        more["whole"] = json.loads((options.whole / "whole.json").read_text(encoding="utf-8"))
     about = about_this_run(options, core)
-    report.write_json(options.out / "benchmark.json", rows, about, summary=found)
+    report.write_json(options.out / "benchmark.json", rows, about, summary=found, **more)
     report.plot(options.out / "benchmark.png", rows)
-    return 3 if any(r.note.startswith("BROKEN") for r in rows) else 0
+    return code
 
 
 def parse(arguments: list[str] | None) -> argparse.Namespace:
@@ -85,6 +94,10 @@ def parse(arguments: list[str] | None) -> argparse.Namespace:
     )
     parser.add_argument("--repeat", type=int, default=3, help="repetitions; the best time counts [%(default)s]")
     parser.add_argument("--ours-only", action="store_true", help="leave the other coders out")
+    parser.add_argument(
+        "--whole", type=Path, metavar="FOLDER", help="measure the whole command too; stacks and stores go to FOLDER"
+    )
+    parser.add_argument("--growth", action="store_true", help="with --whole: from 30 MB to 3 GB; FOLDER needs 10 GB")
     parser.add_argument("--out", type=Path, default=Path("benchmark"), help="folder for JSON and plot [%(default)s]")
     options = parser.parse_args(arguments)
     options.multiples = [float(m) for m in options.tolerances.split(",")]

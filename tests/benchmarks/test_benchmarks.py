@@ -105,6 +105,27 @@ def test_entropy_of_a_stack_is_the_mean_over_its_pixels() -> None:
     assert entropy(camera, electrons)(3) == pytest.approx((camera.bits(10.0, 3) + camera.bits(500.0, 3)) / 2, abs=1e-6)
 
 
+def test_entropy_is_what_an_ideal_coder_spends() -> None:
+    """Coding each recorded pixel under its exact distribution costs the stated floor, within the sampling error."""
+    stack = light_sheet((2, 96, 96))
+    electrons = np.stack([stack.electrons(1, z) for z in (0, 1)]).ravel()
+    pixels = np.stack([stack.plane(1, z) for z in (0, 1)]).ravel()
+    tolerance, costs = 2, []
+    for e, value in zip(electrons[::7], pixels[::7], strict=True):
+        first, probabilities = stack.camera.probabilities(float(e))
+        centre = round(stack.camera.gain * float(e) + stack.camera.offset)
+        step = (int(value) - centre + tolerance) // (2 * tolerance + 1)
+        inside = slice(
+            max(0, centre + (2 * tolerance + 1) * step - tolerance - first),
+            max(0, centre + (2 * tolerance + 1) * step + tolerance + 1 - first),
+        )
+        costs.append(-math.log2(probabilities[inside].sum()))
+
+    assert entropy(stack.camera, electrons)(tolerance) == pytest.approx(
+        np.mean(costs), abs=4 * np.std(costs) / math.sqrt(len(costs))
+    )
+
+
 def test_ratios_are_geometric_means_over_the_stacks_both_can_code() -> None:
     """2 and 8 times smaller are 4 times in the mean; a stack that the standard cannot code does not count."""
     about = ((1, 8, 8), "uint16", 1.0, 1.0, 1)

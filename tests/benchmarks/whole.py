@@ -38,6 +38,7 @@ TOLERANCE = 2
 PLANE = (1024, 1024)
 TINY = (1, 64, 64)
 """A stack so small that the memory it takes is that of the interpreter and the libraries."""
+TINY_STORE = "tiny.ome.zarr"
 
 
 @dataclass(frozen=True)
@@ -57,26 +58,30 @@ class Whole:
     verify_above_libraries: int
     plane_wall: float
     """Opening the store and reading one plane of it, interpreter and imports apart."""
+    plane_bytes: int | None
+    """Bytes read for it, where the system counts them (Linux)."""
+    encode_wall: float
+    """Coding the same tiles in memory, planning included, by as many threads."""
     codec_wall: float
-    """Coding and decoding the same tiles in memory, planning included, by as many threads."""
+    """Coding and decoding them; the command does both, as it compares what the disk holds."""
     codec_cpu: float
 
 
 def main(arguments: list[str] | None = None) -> int:
-    """Measure all sizes; print a table and write JSON."""
+    """Measure all sizes; print a table and write whole.json."""
     options = parse(arguments)
     options.folder.mkdir(parents=True, exist_ok=True)
     memory = ["--memory", options.memory, "--workers", str(options.workers)]
     tiny = options.folder / "tiny.ome.tif"
     write_once(tiny, light_sheet(TINY))
-    store = options.folder / "store.ome.zarr"
+    store = options.folder / TINY_STORE
     compress(tiny, store, memory)  # compiles what is not yet cached
     base = compress(tiny, store, memory).peak
     base_verify = run([STACKBOUND, "verify", str(store)]).peak
     print(f"interpreter, libraries, kernels alone: compress {mib(base)} MiB, verify {mib(base_verify)} MiB")
     print(
-        f"{'pixels':>9}{'wall/Mpx':>10}{'cpu/Mpx':>9}{'ratio':>7}{'peak MiB':>10}{'own MiB':>9}{'verify own':>11}"
-        f"{'plane s':>9}{'codec share of wall':>21}{'of cpu':>8}"
+        f"{'pixels':>9}{'wall us/px':>12}{'cpu us/px':>11}{'ratio':>7}{'peak MiB':>10}{'own MiB':>9}{'verify own':>12}"
+        f"{'plane s':>9}{'plane MB':>10}   the codec's share of the wall time (coding alone), of the CPU time"
     )
     found = []
     for size in options.sizes:
@@ -118,7 +123,8 @@ def measure(folder: Path, size: int, memory: list[str], workers: int, base: int,
     used = compress(source, store, memory)
     report = json.loads(used.output)
     checked = run([STACKBOUND, "verify", str(store), "--json"])
-    codec_wall, codec_cpu = codec_alone(stack, source, workers)
+    encode_wall, codec_wall, codec_cpu = codec_alone(stack, source, workers)
+    plane_wall, plane_bytes = read_plane(store, folder / TINY_STORE)
     return Whole(
         pixels=int(np.prod(stack.shape)),
         source_bytes=report["source_bytes"],
@@ -129,7 +135,9 @@ def measure(folder: Path, size: int, memory: list[str], workers: int, base: int,
         above_libraries=max(0, used.peak - base),
         verify_wall=checked.wall,
         verify_above_libraries=max(0, checked.peak - base_verify),
-        plane_wall=read_plane(store),
+        plane_wall=plane_wall,
+        plane_bytes=plane_bytes,
+        encode_wall=encode_wall,
         codec_wall=codec_wall,
         codec_cpu=codec_cpu,
     )
@@ -137,11 +145,12 @@ def measure(folder: Path, size: int, memory: list[str], workers: int, base: int,
 
 def line(w: Whole) -> str:
     """Return one row of the table."""
-    mpx = w.pixels / 1e6
+    per = w.pixels / 1e6
+    read = "?" if w.plane_bytes is None else f"{w.plane_bytes / 1e6:.2f}"
     return (
-        f"{mpx:8.0f}M{w.wall / mpx:10.4f}{w.cpu / mpx:9.4f}{w.source_bytes / w.store_bytes:7.2f}{w.peak / 2**20:10.0f}"
-        f"{w.above_libraries / 2**20:9.0f}{w.verify_above_libraries / 2**20:11.0f}{w.plane_wall:9.3f}"
-        f"{w.codec_wall / w.wall:21.0%}{w.codec_cpu / w.cpu:8.0%}"
+        f"{per:8.0f}M{w.wall / per:12.4f}{w.cpu / per:11.4f}{w.source_bytes / w.store_bytes:7.2f}{mib(w.peak):>10}"
+        f"{mib(w.above_libraries):>9}{mib(w.verify_above_libraries):>12}{w.plane_wall:9.3f}{read:>10}"
+        f"   {w.codec_wall / w.wall:.0%} ({w.encode_wall / w.wall:.0%}), {w.codec_cpu / w.cpu:.0%}"
     )
 
 
@@ -173,20 +182,31 @@ def compress(source: Path, store: Path, memory: list[str]) -> Any:
     return run([STACKBOUND, "compress", str(source), str(store), "--tolerance", str(TOLERANCE), *memory, "--json"])
 
 
-def read_plane(store: Path) -> float:
-    """Return how long it takes to open a store and read one plane in the middle of it, after the imports."""
-    script = (
-        "import sys, time, stackbound, numba, zarr\n"
-        "began = time.perf_counter()\n"
-        "stack = stackbound.open(sys.argv[1])\n"
-        "plane = stack[0, stack.shape[1] // 2]\n"
-        "print(time.perf_counter() - began)\n"
-    )
-    return float(run([sys.executable, "-c", script, str(store)]).output)
+READ_PLANE = """
+import pathlib, sys, time, stackbound
+counter = pathlib.Path("/proc/self/io")
+def count():
+    return int(counter.read_text().split()[1]) if counter.exists() else None
+stackbound.open(sys.argv[2])[0, 0, :1, :1]  # imports, and compiled kernels from their cache
+before, began = count(), time.perf_counter()
+stack = stackbound.open(sys.argv[1])
+plane = stack[0, stack.shape[1] // 2]
+took, after = time.perf_counter() - began, count()
+print(took, -1 if after is None else after - before)
+"""
 
 
-def codec_alone(stack: SyntheticStack, source: Path, workers: int, most: int = 64 << 20) -> tuple[float, float]:
-    """Return wall and CPU seconds for coding and decoding, scaled from up to `most` pixels of the stack in memory."""
+def read_plane(store: Path, warm_up: Path) -> tuple[float, int | None]:
+    """Return seconds and bytes for opening a store and reading one plane in the middle; `warm_up` is another store."""
+    took, count = run([sys.executable, "-c", READ_PLANE, str(store), str(warm_up)]).output.split()
+    return float(took), None if count == "-1" else int(count)
+
+
+def codec_alone(stack: SyntheticStack, source: Path, workers: int, most: int = 64 << 20) -> tuple[float, float, float]:
+    """Return wall seconds for coding, wall and CPU seconds for coding and decoding.
+
+    They are measured on up to `most` pixels in memory and scaled to the whole stack.
+    """
     with open_source(source) as opened, threadpool_limits(1):
         info = opened.info
         depth = max(1, min(stack.depth, most // int(np.prod(PLANE)) // 2))
@@ -198,18 +218,21 @@ def codec_alone(stack: SyntheticStack, source: Path, workers: int, most: int = 6
     boxes = whole_boxes((0,) * pixels.ndim, pixels.shape, grid.tile)
     outer = type(boxes[0])((0,) * pixels.ndim, pixels.shape)
 
-    def work() -> None:
+    def work() -> float:
+        began = time.perf_counter()
         sample = [tile for _, tile in sample_tiles(InMemory(part), part.info, grid)]
         coder = TileCoder(pipeline.predict, pipeline.encode).planned(sample, [TOLERANCE] * len(sample))
         with ThreadPoolExecutor(workers) as pool:
             payloads = list(pool.map(lambda box: coder.encode(cut_tile(pixels, outer, box), TOLERANCE), boxes))
+            encoded = time.perf_counter() - began
             list(pool.map(lambda payload: decode(payload, grid.tile, pixels.dtype), payloads))
+        return encoded
 
     work()  # compiles, and fills the caches
     scale = float(np.prod(stack.shape)) / pixels.size
     wall, cpu = time.perf_counter(), time.process_time()
-    work()
-    return (time.perf_counter() - wall) * scale, (time.process_time() - cpu) * scale
+    encoded = work()
+    return encoded * scale, (time.perf_counter() - wall) * scale, (time.process_time() - cpu) * scale
 
 
 if __name__ == "__main__":
