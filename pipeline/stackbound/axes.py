@@ -1,4 +1,4 @@
-"""How the axes of stored pixels become the axes of a stack: t, c, z, y, x, always in this order, colour samples as c."""
+"""How the axes of stored pixels become those of a stack: t, c, z, y, x, always in this order, colour samples as c."""
 
 from __future__ import annotations
 
@@ -157,7 +157,7 @@ class Layout:
         if not split:
             return out
         place = letters.index("c")
-        merged = out.reshape(out.shape[:place] + (-1,) + out.shape[place + 2 :])
+        merged = out.reshape((*out.shape[:place], -1, *out.shape[place + 2 :]))
         skip = first % samples
         return np.ascontiguousarray(merged[(slice(None),) * place + (slice(skip, skip + last - first),)])
 

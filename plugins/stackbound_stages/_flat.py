@@ -8,7 +8,6 @@ from typing import IO, Any
 
 import numpy as np
 from numpy.typing import NDArray
-
 from stackbound.errors import SourceError
 from stackbound.stages import Index
 
@@ -90,7 +89,7 @@ class FlatPixels:
 
     def _read_bytes(self, first: int, flat: NDArray[Any]) -> None:
         assert self._file is not None
-        rest = memoryview(flat).cast("B") if flat.dtype.isnative else memoryview(flat.view(np.uint8))
+        rest = memoryview(flat.view(np.uint8))  # type: ignore[arg-type]  # numpy before 2.3 does not say so
         position = self.offset + first * self.dtype.itemsize
         try:
             self._file.seek(position)

@@ -137,7 +137,8 @@ def mend(xml: bytes, info: StackInfo, order: str, *, interleaved: bool, big_endi
         ET.register_namespace("", namespace.strip("{}"))
     ET.register_namespace("xsi", "http://www.w3.org/2001/XMLSchema-instance")
     # OME-TIFF wants the comment in the description to be ASCII or UTF-8; numeric references are both.
-    return b'<?xml version="1.0" encoding="UTF-8"?>' + ET.tostring(root, encoding="us-ascii").partition(b"?>\n")[2]
+    text: str = ET.tostring(root, encoding="unicode")
+    return b'<?xml version="1.0" encoding="UTF-8"?>' + text.encode("ascii", "xmlcharrefreplace")
 
 
 def _fits(pixels: ET.Element, info: StackInfo) -> bool:

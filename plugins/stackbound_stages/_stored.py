@@ -7,7 +7,6 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from numpy.typing import NDArray
-
 from stackbound.axes import Layout
 from stackbound.errors import SourceError
 from stackbound.stages import Index, OpenSource, SourceFile, StackInfo

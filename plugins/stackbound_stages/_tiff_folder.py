@@ -12,7 +12,6 @@ from typing import Any
 import numpy as np
 import tifffile
 from numpy.typing import NDArray
-
 from stackbound.axes import DROPPED, Layout, check_axes
 from stackbound.errors import SourceError, UsageError
 from stackbound.sources import is_litter, natural_key
@@ -149,7 +148,7 @@ def _open_single_planes(paths: Sequence[Path], axes: str | None) -> StoredSource
     layout = Layout(arrangement.axes + inner, arrangement.shape + shape)
     pixels = _PlaneFiles(planes, arrangement.shape, shape)
     metadata.notes.insert(0, arrangement.note)
-    metadata.attributes["axes"] = layout.stored
+    metadata.attributes |= {"axes": layout.stored, "kind": "planes"}
     return StoredSource(_info(layout, dtype, metadata, pixels.whole_planes), layout, pixels, files)
 
 
@@ -168,7 +167,7 @@ def _first_plane(path: Path) -> tuple[Index, np.dtype[Any], str, Metadata]:
             kind = "ome" if tiff.is_ome else "imagej" if tiff.is_imagej else "uniform"
             metadata = read_metadata(tiff, kind, "")
             letters = "".join(letter.lower() if letter in "YXS" else "?" for letter in page.axes)
-            return tuple(page.shape), np.dtype(page.dtype.name), letters, metadata
+            return tuple(page.shape), np.dtype(str(page.dtype)), letters, metadata
     except (OSError, tifffile.TiffFileError) as error:
         raise SourceError(f"the file cannot be read as TIFF: {error}", where=name, remedy=CUT) from error
 
@@ -287,7 +286,7 @@ def _open_stacks(paths: Sequence[Path], axes: str | None, open_file: OpenFile) -
         units=tuple(by_axis.get(axis, (None, None))[1] for axis in layout.axes),
         channel_names=first.channel_names if said[0] != "c" else (),
         ome_xml=None,
-        attributes={**first.attributes, "axes": layout.stored},
+        attributes={**first.attributes, "axes": layout.stored, "kind": "planes"},
         notes=(
             f"{len(paths)} files in natural order of their names are taken as {said[0]} (as --axes says).",
             *first.notes,

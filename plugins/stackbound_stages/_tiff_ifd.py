@@ -14,7 +14,6 @@ from typing import IO
 
 import numpy as np
 from numpy.typing import NDArray
-
 from stackbound.errors import SourceError
 
 CUT = "The file was cut short or damaged; copy or export it again."

@@ -11,13 +11,20 @@ from typing import Any
 import tifffile
 
 from . import _ome_xml
-from ._units import in_micrometers, unit_name
+from ._units import unit_name
 
 _LAYOUT_TAGS = {273, 279, 324, 325, 288, 289, 347}
 """Fields that only say where bytes lie or how they are coded; they mean nothing without the file."""
 
+_OWN_TAGS = {32997, 32998, 33432, 34377, 34665, 34853, 40965, 50838, 50839}
+"""Fields beyond the baseline that are kept in other ways, or that point to tables elsewhere in the file."""
+
 _PRINT_RESOLUTIONS = {0, 1, 72, 96, 100, 150, 200, 300, 400, 600, 1200}
 """Dots per inch that programs write when they know nothing of the image."""
+
+
+_LOSSY = (6, 7, 33007, 34892, 34887)
+"""JPEG in its four TIFF forms, and LERC."""
 
 
 @dataclass
@@ -78,6 +85,7 @@ def _attributes(tiff: tifffile.TiffFile, page: tifffile.TiffPage, kind: str, sto
         "kind": kind,
         "axes": stored,
         "byteorder": "big" if tiff.byteorder == ">" else "little",
+        "bigtiff": bool(tiff.is_bigtiff),
         "photometric": int(page.photometric),
         "planar": int(page.planarconfig or 1) == 2,
         "samples": int(page.samplesperpixel),
@@ -90,11 +98,6 @@ def _attributes(tiff: tifffile.TiffFile, page: tifffile.TiffPage, kind: str, sto
         found["resolution_unit"] = int(page.tags[296].value) if 296 in page.tags else 2
     if page.colormap is not None and page.colormap.shape[-1] <= 256:
         found["colormap"] = page.colormap.astype(int).tolist()
-    for code, name in ((305, "software"), (306, "datetime"), (315, "artist"), (33432, "copyright")):
-        if code in page.tags and isinstance(page.tags[code].value, str):
-            found[name] = page.tags[code].value
-    if kind not in ("ome", "shaped") and page.description:
-        found["description"] = page.description
     return found
 
 
@@ -104,6 +107,9 @@ def _headers(tiff: tifffile.TiffFile, page: tifffile.TiffPage) -> dict[str, byte
         entry = {"code": tag.code, "name": tag.name, "type": int(tag.dtype), "count": tag.count}
         if tag.code not in _LAYOUT_TAGS:
             entry["value"] = _plain(tag.value)
+        if tag.code > 532 and tag.code not in _OWN_TAGS and tag.valuebytecount <= 2**16:
+            tiff.filehandle.seek(tag.valueoffset)
+            entry["raw"] = base64.b64encode(tiff.filehandle.read(tag.valuebytecount)).decode()
         entries.append(entry)
     text = json.dumps(entries, ensure_ascii=False, indent=1)
     headers = {"tiff-tags.json": text.encode()}
@@ -211,25 +217,13 @@ def _number(value: Any) -> float | None:
 
 
 def _remarks(page: tifffile.TiffPage, found: Metadata) -> None:
-    if int(page.compression) in (6, 7, 33007, 34892, 34887, 34927, 50001, 34933) and _is_lossy(page):
+    if int(page.compression) in _LOSSY:
+        name = tifffile.COMPRESSION(page.compression).name
         found.notes.append(
-            f"The file is compressed with {page.compression.name}, which as a rule is lossy: the promise counts from "
-            "the pixels as they are read now."
+            f"The file is compressed with {name}, which as a rule is lossy: the promise counts from the pixels as they "
+            "are read now."
         )
     if int(page.photometric) == 3:
         found.notes.append("The pixels are indices into a colour table: where it is no smooth ramp, use tolerance 0.")
     if page.dtype is not None and page.bitspersample not in (8, 16, 32, 64):
         found.notes.append(f"The pixels are stored with {page.bitspersample} bits and are read as {page.dtype.name}.")
-
-
-def _is_lossy(page: tifffile.TiffPage) -> bool:
-    return int(page.compression) in (6, 7, 33007, 34892, 34887)
-
-
-def pixel_size_note(found: Metadata) -> str | None:
-    """Return a remark where sizes in two directions disagree wildly (a sign of a wrong unit)."""
-    sizes = [in_micrometers(found.scale[axis], found.units.get(axis)) for axis in "yx" if axis in found.scale]
-    known = [size for size in sizes if size]
-    if len(known) == 2 and max(known) > 100 * min(known):
-        return "The pixel sizes along y and x differ more than a hundredfold."
-    return None

@@ -11,7 +11,6 @@ from typing import Any
 import numpy as np
 import tifffile
 from numpy.typing import NDArray
-
 from stackbound.errors import SourceError
 from stackbound.stages import Index
 
@@ -126,14 +125,14 @@ class CodedPlanes:
         bounds = tuple(zip(start[lead:], stop[lead:], strict=True))
         box = tuple((0, 1) if axis is None else bounds[axis] for axis in self._five)
         used = set(self._five)
-        pick = tuple(slice(None) if axis in used else 0 for axis in range(len(bounds)))
+        pick: tuple[slice | int, ...] = tuple(slice(None) if axis in used else 0 for axis in range(len(bounds)))
         spread = tuple(None if axis is None else slice(None) for axis in self._five)
         for index in np.ndindex(*out.shape[:lead]):
             place = tuple(low + step for low, step in zip(start, index, strict=False))
             self._fill_plane(_ravel(place, self._lead), box, out[index][pick][spread])
 
     def _fill_plane(self, plane: int, box: Box5, out: NDArray[Any]) -> None:
-        _, depth, length, width, samples = self._key.shaped
+        _, depth, length, width, _ = self._key.shaped
         if self._key.is_tiled:
             sides = (1, self._key.tiledepth, self._key.tilelength, self._key.tilewidth)
         else:
@@ -147,12 +146,14 @@ class CodedPlanes:
                     for column in spans[3]:
                         segment = self._segment(plane, ((s * grid[0] + d) * grid[1] + row) * grid[2] + column)
                         corner = (d * sides[1], row * sides[2], column * sides[3])
-                        take, put = [], []
+                        take: list[slice] = []
+                        put: list[slice] = []
                         for first, (low, high), size in zip(corner, box[1:4], segment.shape[:3], strict=True):
                             begin, end = max(first, low), min(first + size, high)
                             take.append(slice(begin - first, end - first))
                             put.append(slice(begin - low, end - low))
-                        out[(s - box[0][0], *put)] = segment[(*take, slice(low_s, high_s))]
+                        place: tuple[slice | int, ...] = (s - box[0][0], *put)
+                        out[place] = segment[(*take, slice(low_s, high_s))]
 
     def _segment(self, plane: int, number: int) -> NDArray[Any]:
         """Return one decoded strip or tile, shape (depth, length, width, samples)."""
@@ -183,7 +184,7 @@ class CodedPlanes:
             decoded, _, shape = self._key.decode(data, number, **more)
         except SourceError:
             raise
-        except Exception as error:  # noqa: BLE001  # each of the many decoders has exceptions of its own
+        except Exception as error:  # each of the many decoders has exceptions of its own
             raise SourceError(f"the pixels cannot be decoded: {error}", where=where, remedy=CUT) from error
         if decoded is None:
             return np.full(shape, self._key.nodata, self._key.dtype)

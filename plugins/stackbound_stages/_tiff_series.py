@@ -12,14 +12,13 @@ from typing import Any
 
 import numpy as np
 import tifffile
-
 from stackbound.axes import DROPPED, apply_axes, describe_shape
 from stackbound.errors import SourceError
 
 from ._tiff_ifd import CUT, Page, PageTable
 
 _MINOR = re.compile(
-    r"TiffTag|coercing|GeoKey|GDAL_NODATA|read_utf8|read_json|_metadata> raised|_tags> raised|get_resolution"
+    r"TiffTag|GeoKey|GDAL_NODATA|read_utf8|read_json|_metadata> raised|_tags> raised|get_resolution"
     r"|#\d+ raised|for tag #|read_uic"
 )
 """Messages of tifffile about a single field; all others mean that the stack itself is in doubt. The fields on which
@@ -34,11 +33,13 @@ def watched(name: str) -> Iterator[list[str]]:
     passing_on, logger.propagate = logger.propagate, False
     logger.addHandler(handler)
     minor: list[str] = []
+    # Text that is no ASCII is kept as bytes: nothing is lost.
     try:
         yield minor
     finally:
         logger.removeHandler(handler)
         logger.propagate = passing_on
+        handler.messages = [message for message in handler.messages if "coercing" not in message]
         minor += [message for message in handler.messages if _MINOR.search(message)]
     grave = [message for message in handler.messages if not _MINOR.search(message)]
     if grave:
@@ -186,7 +187,7 @@ def plane_pages(series: tifffile.TiffPageSeries, table: PageTable, name: str) ->
         A plane has another size, pixel type or compression than the first.
     """
     by_offset = {page.offset: page for page in table.pages}
-    pages = [by_offset.get(page.offset) for page in series.pages]
+    pages = [by_offset.get(page.offset if page is not None else -1) for page in series.pages]
     found = [page for page in pages if page is not None]
     if len(found) < len(pages) or len(found) * prod(series.keyframe.shape) != prod(series.shape):
         return None

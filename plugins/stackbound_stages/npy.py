@@ -8,7 +8,6 @@ from typing import Any
 
 import numpy as np
 from numpy.lib import format as npy_format
-
 from stackbound.axes import Layout, apply_axes, describe_shape, guess_axes
 from stackbound.errors import SourceError
 from stackbound.plugins import hookimpl

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import tifffile
-
 from stackbound.axes import Layout
 from stackbound.errors import SourceError, StackboundError
 from stackbound.plugins import hookimpl
@@ -75,7 +75,7 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
     except StackboundError as error:
         if tiff is not None:
             tiff.close()
-        raise error if error.where else error.at(name)
+        raise (error if error.where else error.at(name)) from error.__cause__
     except Exception as error:  # the library raises what its parsers happen to raise
         if tiff is not None:
             tiff.close()
@@ -118,7 +118,7 @@ def _pixels(
     inner = inner_axes(shape, len(pages))
     if len(places) == len(pages):
         plane = int(series.keyframe.size) * stored.itemsize
-        if all(later - earlier == plane for earlier, later in zip(places, places[1:], strict=False)):
+        if all(later - earlier == plane for earlier, later in pairwise(places)):
             tiff.close()
             return FlatPixels(path, places[0], shape, stored, name)
         if inner is not None:
