@@ -67,7 +67,15 @@ def test_every_package_says_that_it_is_typed():
 def test_no_text_speaks_of_its_makers_machine():
     """No file names a folder of a developer's machine, or where packages are fetched from."""
     # Put together here, so that this very file does not hold them.
-    words = ["/" + "tmp/w/", "/" + "work/", "/" + "root/", "/" + "home/", "py" + "pi", "python" + "hosted", "npm" + "js"]
+    words = [
+        "/" + "tmp/w/",
+        "/" + "work/",
+        "/" + "root/",
+        "/" + "home/",
+        "py" + "pi",
+        "python" + "hosted",
+        "npm" + "js",
+    ]
     found = [
         f"{path.relative_to(ROOT)}: {word}"
         for path in texts()
@@ -86,8 +94,11 @@ def test_text_files_have_unix_line_ends():
 
 def test_files_can_be_read_in_one_sitting():
     """No module is longer than 450 lines."""
-    long = {str(path.relative_to(ROOT)): len(path.read_text(encoding="utf-8").splitlines()) for path in texts()
-            if path.suffix == ".py" and "tests" not in path.parts}
+    long = {
+        str(path.relative_to(ROOT)): len(path.read_text(encoding="utf-8").splitlines())
+        for path in texts()
+        if path.suffix == ".py" and "tests" not in path.parts
+    }
 
     assert {} == {name: lines for name, lines in long.items() if lines > 450}
 
@@ -135,7 +146,11 @@ def test_every_public_function_is_documented():
             continue
         text = inspect.getdoc(item) or ""
         parameters = list(inspect.signature(item).parameters)
-        missing = [parameter for parameter in parameters if not re.search(rf"^{parameter}\b.* : |, {parameter}\b.* : |^{parameter},.* : ", text, re.M)]
+        missing = [
+            parameter
+            for parameter in parameters
+            if not re.search(rf"^{parameter}\b.* : |, {parameter}\b.* : |^{parameter},.* : ", text, re.M)
+        ]
 
         assert [] == missing, name
 
@@ -274,7 +289,7 @@ def test_the_wheel_holds_packages_recipes_and_licence(tmp_path):
 
 
 def test_the_lock_file_holds_every_dependency():
-    """Every dependency, of the program, the tests and the linters, is locked with hashes, and nothing says from where."""
+    """Every dependency of program, tests and linters is locked with hashes, and nothing says from where."""
     lock = (ROOT / "requirements.lock").read_text(encoding="utf-8")
     groups = PROJECT["dependency-groups"]
     wanted = list(PROJECT["project"]["dependencies"])
@@ -292,14 +307,14 @@ def test_the_lock_file_holds_every_dependency():
 
 
 def test_the_linter_is_content():
-    """ruff finds nothing, and every file is formatted."""
+    """Ruff finds nothing, and every file is formatted."""
     for words in (["check"], ["format", "--check"]):
         run = subprocess.run([sys.executable, "-m", "ruff", *words, "."], cwd=ROOT, capture_output=True, text=True)
         assert 0 == run.returncode, run.stdout + run.stderr
 
 
 def test_the_type_checker_is_content():
-    """mypy in strict mode finds nothing."""
+    """Mypy in strict mode finds nothing."""
     run = subprocess.run([sys.executable, "-m", "mypy"], cwd=ROOT, capture_output=True, text=True)
 
     assert 0 == run.returncode, run.stdout + run.stderr

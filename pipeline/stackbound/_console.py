@@ -69,7 +69,7 @@ def announce_compilation() -> None:
     """Say so when numba compiles a kernel in this process, which happens at the first use after an installation."""
     from numba.core import event
 
-    class Announcer(event.Listener):  # type: ignore[misc]  # numba has no types
+    class Announcer(event.Listener):
         told = False
 
         def on_start(self, _: object) -> None:
@@ -81,7 +81,7 @@ def announce_compilation() -> None:
             pass
 
     # numba raises this event only where its cache holds nothing, so the message is true whenever it comes.
-    event.register("numba:compile", Announcer())
+    event.register("numba:compile", Announcer())  # type: ignore[no-untyped-call]
 
 
 class ConsoleProgress:
