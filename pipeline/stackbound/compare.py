@@ -169,13 +169,16 @@ def _sum(values: Pixels) -> int:
 
 def _sum_of_squares(magnitudes: Pixels, largest: int) -> int:
     # Limbs of 16 bits in float64: a block has at most 2**16 products below 2**32, so every partial sum is a whole
-    # number below 2**53 and the fast product of floats is exact in any order.
+    # number below 2**53 and exact in any order.
     if magnitudes.dtype.itemsize <= 2:
         limbs = [magnitudes.astype(np.float64)]
     else:
         shifts = range(0, largest.bit_length(), 16)
         limbs = [((magnitudes >> shift) & 0xFFFF).astype(np.float64) for shift in shifts]
-    return sum(int(np.dot(a, b)) << (16 * (i + j)) for i, a in enumerate(limbs) for j, b in enumerate(limbs))
+    # Not `dot`: a matrix library would start threads for it.
+    return sum(
+        int(np.einsum("i,i->", a, b)) << (16 * (i + j)) for i, a in enumerate(limbs) for j, b in enumerate(limbs)
+    )
 
 
 def _over_integers(original: Pixels, decoded: Pixels, tolerance: Number) -> int:
