@@ -124,12 +124,14 @@ class LightSheetScene:
     def _body(self, depth: float, y: Plane, x: Plane) -> Plane:
         """Return where there is tissue (1) and where a gap (0), with soft borders: a sum of long waves, squashed."""
         random = generator(self.seed, BODY)
-        total = np.full(self.size, 1.3, np.float32)
+        along_y, along_x = [], []
         for _ in range(5):
             waves = random.normal(size=3) / random.uniform(12.0, 40.0)
-            phase = random.uniform(0.0, 2 * np.pi) + waves[0] * depth
-            along_y, along_x = waves[1] * y + np.float32(phase), np.float32(waves[2]) * x
-            total += np.outer(np.cos(along_y), np.cos(along_x)) - np.outer(np.sin(along_y), np.sin(along_x))
+            a = waves[1] * y + np.float32(random.uniform(0.0, 2 * np.pi) + waves[0] * depth)
+            b = np.float32(waves[2]) * x
+            along_y += [np.cos(a), -np.sin(a)]  # cos(a + b) = cos a cos b - sin a sin b
+            along_x += [np.cos(b), np.sin(b)]
+        total = np.float32(1.3) + np.stack(along_y, axis=1).astype(np.float32) @ np.stack(along_x).astype(np.float32)
         return np.asarray(1 / (1 + np.exp(np.clip(-4 * total, -30, 30))), np.float32)
 
     def _illumination(self, z: int, depth: float, y: Plane, x: Plane) -> Plane:
@@ -158,8 +160,9 @@ class _Nucleus:
     def draw(self, light: Plane, depth: float, pixel: tuple[float, float, float], soft: float) -> None:
         """Add the cut at `depth` to `light`."""
         above = depth - self.centre[0]
-        reach = float(self.radii[1:].max()) + 4 * soft
-        if abs(above) > self.radii[0] + 4 * soft:
+        blur = soft / float(self.radii.min())
+        reach = float(self.radii[1:].max()) * (1 + blur)
+        if abs(above) > self.radii[0] * (1 + blur):
             return
         bounds = [
             (max(0, int((c - reach) / p)), min(n, int((c + reach) / p) + 1))
@@ -174,9 +177,9 @@ class _Nucleus:
         y = y[:, None]
         cos, sin = np.float32(np.cos(self.angle)), np.float32(np.sin(self.angle))
         u, v = (y * cos + x * sin) / np.float32(self.radii[1]), (x * cos - y * sin) / np.float32(self.radii[2])
-        outward = np.sqrt(u * u + v * v + np.float32((above / self.radii[0]) ** 2)) - 1
-        steep = np.float32(self.radii.min() / soft)
-        density = 1 / (1 + np.exp(np.clip(outward * steep * 2, -30, 30)))
+        distance = np.sqrt(u * u + v * v + np.float32((above / self.radii[0]) ** 2))
+        inside = np.clip((np.float32(1 + blur) - distance) / np.float32(2 * blur), 0, 1)
+        density = inside * inside * (3 - 2 * inside)
         waves = [np.cos(g[1] * y + g[2] * x + (g[0] * above + g[3])) for g in self.grain.astype(np.float32)]
         part = light[bounds[0][0] : bounds[0][1], bounds[1][0] : bounds[1][1]]
         part += np.float32(self.light) * density * (1 + np.float32(0.35) * waves[0] * waves[1])

@@ -53,7 +53,7 @@ def tolerance_for(noise: float, multiple: float, dtype: np.dtype[Any]) -> int | 
     return max(1, math.floor(multiple * noise + 0.5))
 
 
-def entropy(camera: Camera, electrons: NDArray[np.float32], *, pixels: int = 2000) -> Callable[[int], float]:
+def entropy(camera: Camera, electrons: NDArray[np.float32], *, pixels: int = 500) -> Callable[[int], float]:
     """Return a function that gives the mean entropy of the camera's noise, in bits per pixel, at a tolerance.
 
     Each pixel's grey level falls into bins of ``2 * tolerance + 1`` levels centred on its own noiseless signal; a coder
