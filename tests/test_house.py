@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ast
 import inspect
+import json
 import re
 import subprocess
 import sys
@@ -16,8 +17,9 @@ import pytest
 import stackbound
 from stackbound import cli
 from stackbound.config import schema
-from stackbound.plugins import KINDS, _Hooks, registry
+from stackbound.plugins import KINDS, registry
 from stackbound.recipes import recipe_names
+from stackbound.registry import Hooks
 
 ROOT = Path(__file__).parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -210,10 +212,10 @@ def test_every_recipe_is_in_the_readme(name):
     assert "Not for" in text
 
 
-@pytest.mark.parametrize("hook", [name for name in vars(_Hooks) if not name.startswith("_")])
+@pytest.mark.parametrize("hook", [name for name in vars(Hooks) if not name.startswith("_")])
 def test_every_hook_is_documented_and_tested(hook):
     """DEVELOPERS.md shows each hook with its arguments, and some test implements it."""
-    arguments = [name for name in inspect.signature(getattr(_Hooks, hook)).parameters if name != "self"]
+    arguments = [name for name in inspect.signature(getattr(Hooks, hook)).parameters if name != "self"]
 
     assert f"`{hook}({', '.join(arguments)})`" in DEVELOPERS
     assert any(f"def {hook}(" in path.read_text(encoding="utf-8") for path in (ROOT / "tests").rglob("test_*.py"))
@@ -262,6 +264,22 @@ def test_the_code_of_the_readme_runs(tmp_path, monkeypatch, capfd):
 
     assert len(commands) >= 4
     assert blocks
+
+
+def test_the_plugin_of_the_guide_works(tmp_path, monkeypatch, capfd, fresh_registry):
+    """The plugin that DEVELOPERS.md shows, put into a file, does what the text beside it says."""
+    import numpy as np
+
+    monkeypatch.chdir(tmp_path)
+    np.save("in.npy", np.arange(4000, dtype=np.uint16).reshape(50, 80))
+    (tmp_path / "bright.py").write_text(code_blocks(DEVELOPERS, "python")[0], encoding="utf-8", newline="\n")
+    figures = re.search(r"`(figures = [^`]*bright-count[^`]*)`", DEVELOPERS)
+    assert figures
+    (tmp_path / "my.toml").write_text(f"[verify]\n{figures[1]}\n", encoding="utf-8", newline="\n")
+    words = "compress in.npy out.ome.zarr --tolerance 4 --plugin bright.py --config my.toml --json".split()
+
+    assert 0 == cli.run(words), capfd.readouterr().err
+    assert {"max-error", "bright-count"} == set(json.loads(capfd.readouterr().out)["figures"])
 
 
 # ---------------------------------------------------------------------------------------------------------- packages
