@@ -1,24 +1,45 @@
-"""One tile to bytes and back."""
+"""One tile to bytes and back.
+
+A payload is a format version, a checksum of everything after it, a checksum of the decoded pixels, and the numbers and
+streams from which they are decoded. ``DECODE.txt`` beside this file describes every byte.
+"""
 
 from __future__ import annotations
 
-import struct
-import zlib
 from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound.errors import TileError, UsageError
-from stackbound.lattice import Tolerance
+from stackbound import lattice, tilecore
+from stackbound.byteio import Reader, Writer, damaged
+from stackbound.checksum import crc32c
+from stackbound.errors import TileError
+from stackbound.lattice import LatticeTile, Tolerance
+from stackbound.prediction import NoPrediction, Prediction
 from stackbound.stages import Encode, Predict
 
-_HEAD = struct.Struct("<BBqqI")
+VERSION = 1
+HEAD = 9
+"""Bytes of the version and the two checksums."""
+
+CONSTANT, CODED = 0, 1
+SAMPLES = 4
 
 
 class TileCoder:
-    """The stages and the stack-level plan with which tiles are encoded."""
+    """The stages and the stack-level plan with which tiles are encoded.
+
+    Frozen in use: safe to share between threads and to pickle.
+
+    Parameters
+    ----------
+    predict : Predict
+    encode : Encode
+    plan : mapping, optional
+        What `planned` chose for the stack; without it every tile plans for itself, which takes longer.
+    """
 
     def __init__(self, predict: Predict, encode: Encode, plan: Mapping[str, Any] | None = None) -> None:
         self.predict = predict
@@ -26,21 +47,59 @@ class TileCoder:
         self.plan: Mapping[str, Any] = dict(plan or {})
 
     def planned(self, samples: Sequence[NDArray[Any]], tolerances: Sequence[Tolerance]) -> TileCoder:
-        """Return a coder whose stack-level choices fit these whole tiles."""
-        return TileCoder(self.predict, self.stage, self.plan)
+        """Return a coder whose stack-level choices fit some whole tiles.
+
+        Parameters
+        ----------
+        samples : sequence of ndarray
+            Whole tiles.
+        tolerances : sequence of tolerances
+            One for each.
+        """
+        tiles = []
+        for pixels, tolerance in zip(samples, tolerances, strict=True):
+            cropped, _ = lattice.crop(lattice.three_axes(pixels))
+            mapped = lattice.to_lattice(cropped, tolerance)
+            tiles += mapped.split(cropped)[:1] if mapped.width else []
+        if not tiles:
+            return TileCoder(self.predict, self.stage, self.plan)
+        return TileCoder(self.predict, self.stage, self.predict.plan(tiles, _size))
 
     def encode(self, pixels: NDArray[Any], tolerance: Tolerance) -> bytes:
-        """Return the bytes of one tile, each pixel of which will decode to within `tolerance`."""
-        if pixels.dtype.kind not in "iu":
-            raise UsageError(f"pixels of type {pixels.dtype} cannot be coded")
-        low, high = int(pixels.min()), int(pixels.max())
-        bound = min(int(tolerance), high - low)  # type: ignore[arg-type]
-        if pixels.dtype.itemsize == 8 and high - low >= 2**62:
-            bound = 0
-        wide = 2 * bound + 1
-        index = ((pixels.astype(np.uint64) - np.uint64(low % 2**64)) + np.uint64(bound)) // np.uint64(wide)
-        body = zlib.compress(np.ascontiguousarray(index).tobytes(), 1)
-        return _HEAD.pack(1, 0, low, high, bound) + struct.pack("<I", zlib.crc32(body)) + body
+        """Return the bytes of one tile, every pixel of which decodes to within the tolerance.
+
+        Parameters
+        ----------
+        pixels : ndarray
+            One to five axes, integers of 8 to 64 bits in native byte order, at least one pixel.
+        tolerance : int, float
+            In stored pixel values.
+
+        Raises
+        ------
+        stackbound.errors.UsageError
+            A dtype that cannot be coded, or a tolerance below zero or not a number.
+        stackbound.errors.PluginError
+            A stage broke its contract.
+        """
+        whole = lattice.three_axes(pixels)
+        cropped, last = lattice.crop(whole)
+        mapped = lattice.to_lattice(cropped, tolerance)
+        writer = Writer()
+        for length, kept in zip(whole.shape, cropped.shape, strict=True):
+            writer.number(length - kept)
+        if cropped.shape != whole.shape:
+            writer.signed(int(last))
+        mapped.write(writer)
+        values = []
+        for tile in mapped.split(cropped):
+            # One value needs no stage.
+            prediction = self.predict.predict(tile, self.plan, _size) if tile.span else NoPrediction()
+            parts = tilecore.encode(tile, prediction)
+            writer.data += parts.head + parts.indices + parts.residuals
+            values.append(parts.values)
+        decoded = _uncropped(mapped.pixels(values, pixels.dtype), whole.shape, last)
+        return _sealed(bytes(writer.data), decoded)
 
 
 def decode(
@@ -48,27 +107,86 @@ def decode(
 ) -> NDArray[Any]:
     """Return the pixels of one tile.
 
+    Parameters
+    ----------
+    payload : bytes-like
+        What `TileCoder.encode` returned.
+    shape : tuple of int
+    dtype : numpy.dtype
+        Native byte order.
+
+    Returns
+    -------
+    ndarray
+        C-contiguous.
+
     Raises
     ------
     stackbound.errors.TileError
-        The bytes are damaged or belong to another tile.
+        The bytes are damaged, belong to another tile, or would decode to other pixels than the encoder's.
     """
-    data = bytes(payload)
-    try:
-        version, _, low, high, bound = _HEAD.unpack_from(data)
-        (crc,) = struct.unpack_from("<I", data, _HEAD.size)
-        body = data[_HEAD.size + 4 :]
-        if version != 1 or zlib.crc32(body) != crc:
-            raise TileError("the bytes of this tile are damaged")
-        raw = zlib.decompress(body)
-        index = np.frombuffer(raw, np.uint64).reshape(shape)
-    except (struct.error, zlib.error, ValueError) as error:
-        raise TileError("the bytes of this tile are damaged") from error
-    value = np.minimum(index * np.uint64(2 * bound + 1), np.uint64(high - low)) + np.uint64(low % 2**64)
-    return value.astype(dtype)
+    view = memoryview(payload).cast("B")
+    body = _opened(view)
+    pixels = decode_body(Reader(body), shape, np.dtype(dtype))
+    if _pixel_checksum(pixels, body) != int.from_bytes(view[5:9], "little"):
+        raise TileError(
+            "this tile decodes to other pixels than those that were verified",
+            remedy="The program, a library or the machine computes differently; the stored bytes are as written.",
+        )
+    return pixels
+
+
+def decode_body(reader: Reader, shape: tuple[int, ...], dtype: np.dtype[Any]) -> NDArray[Any]:
+    """Return the pixels from what follows the checksums."""
+    whole = lattice.three_axes_shape(shape)
+    cut = [reader.number(length - 1) for length in whole]
+    last = reader.signed() if any(cut) else 0
+    kept = (whole[0] - cut[0], whole[1] - cut[1], whole[2] - cut[2])
+    mapped = lattice.read(reader, dtype)
+    values = [tilecore.decode(reader, kept, span, tolerance) for span, tolerance in mapped.parts()]
+    reader.end()
+    info = np.iinfo(dtype)
+    if not info.min <= last <= info.max:
+        raise damaged("the padding does not fit the pixel type")
+    return _uncropped(mapped.pixels(values, dtype), whole, last).reshape(shape)
+
+
+def _uncropped(pixels: NDArray[Any], shape: tuple[int, ...], last: Any) -> NDArray[Any]:
+    if pixels.shape == shape:
+        return pixels
+    out = np.full(shape, last, pixels.dtype)
+    out[tuple(slice(length) for length in pixels.shape)] = pixels
+    return out
 
 
 def describe(payload: bytes | memoryview | NDArray[np.uint8]) -> dict[str, Any]:
-    """Return what the bytes of one tile say about themselves."""
-    version, _, low, high, bound = _HEAD.unpack_from(bytes(payload[:64]))
-    return {"version": version, "mode": "plain", "tolerance": bound, "minimum": low, "maximum": high}
+    """Return what the bytes of one tile say about themselves: version, tolerance, lattice, prediction."""
+    return {"version": memoryview(payload).cast("B")[0]}
+
+
+def _size(tile: LatticeTile, prediction: Prediction) -> int:
+    return len(tilecore.encode(tile, prediction))
+
+
+def _sealed(body: bytes, pixels: NDArray[Any]) -> bytes:
+    checksum = _pixel_checksum(pixels, memoryview(body)).to_bytes(4, "little")
+    return bytes([VERSION]) + crc32c(checksum + body).to_bytes(4, "little") + checksum + body
+
+
+def _opened(view: memoryview) -> memoryview:
+    if len(view) < HEAD:
+        raise damaged("it ends too soon")
+    if view[0] != VERSION:
+        raise TileError(
+            f"this tile has format version {view[0]}, and this program reads version {VERSION}",
+            remedy="Install a newer stackbound.",
+        )
+    if crc32c(view[5:]) != int.from_bytes(view[1:5], "little"):
+        raise damaged("its checksum does not match")
+    return view[HEAD:]
+
+
+def _pixel_checksum(pixels: NDArray[Any], body: memoryview) -> int:
+    """Return the checksum of the pixel bytes, begun from that of the lattice parameters at the body's start."""
+    little = np.ascontiguousarray(pixels, pixels.dtype.newbyteorder("<"))
+    return crc32c(little.reshape(-1).view(np.uint8), crc32c(bytes(body[:24])))

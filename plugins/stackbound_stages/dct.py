@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from stackbound.plugins import hookimpl
+from stackbound import hookimpl
 from stackbound.stages import Options, Plan, Stage, Transform
 
 if TYPE_CHECKING:

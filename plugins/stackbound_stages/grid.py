@@ -6,7 +6,7 @@ from math import ceil, isqrt, prod
 
 from pydantic import Field, PositiveInt
 
-from stackbound.plugins import hookimpl
+from stackbound import hookimpl
 from stackbound.errors import UsageError
 from stackbound.stages import Grid, Index, OpenSource, Options, StackInfo, Stage, Tile
 

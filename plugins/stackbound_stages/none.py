@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import TYPE_CHECKING
 
-from stackbound.plugins import hookimpl
+from stackbound import hookimpl
 from stackbound.stages import Options, Plan, Predict, Stage
 
 if TYPE_CHECKING:

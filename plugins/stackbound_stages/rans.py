@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from stackbound.plugins import hookimpl
+from stackbound import hookimpl
 from stackbound.stages import Encode, Options, Stage
 
 

@@ -1,0 +1,170 @@
+"""One array of lattice values to bytes and back: prediction, residual, entropy coding."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from math import prod
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stackbound import entropy
+from stackbound.byteio import Reader, Writer, damaged
+from stackbound.errors import PluginError
+from stackbound.kernels import bound, inverse
+from stackbound.kernels.basis import COEFFICIENT_LIMIT, LENGTHS, cosine, widest
+from stackbound.kernels.blocks import counts
+from stackbound.lattice import LatticeTile
+from stackbound.prediction import BlockPrediction, NoPrediction, Prediction
+
+NO_PREDICTION, BLOCKS = 0, 1
+COSINE, MATRIX = 0, 1
+INDEX_LIMIT = 2**30
+DEEPEST_BLOCK = 16
+MATRIX_LIMIT = 2**15
+
+
+@dataclass(frozen=True)
+class Parts:
+    """The bytes of one array by what they hold."""
+
+    head: bytes
+    indices: bytes
+    residuals: bytes
+    values: NDArray[np.int32]
+    """The lattice values that the decoder will make of them."""
+
+    def __len__(self) -> int:
+        return len(self.head) + len(self.indices) + len(self.residuals)
+
+
+def encode(tile: LatticeTile, prediction: Prediction) -> Parts:
+    """Return the bytes of a tile under a prediction; the error stays within the tolerance whatever that is."""
+    writer = Writer()
+    indices = b""
+    if isinstance(prediction, BlockPrediction):
+        checked = check(prediction, tile)
+        _write_prediction(writer, checked)
+        grid = counts(tile.values.shape, checked.block)
+        indices = entropy.encode_indices(checked.indices.reshape(prod(checked.block), -1), checked.block, grid)
+        predicted = form(checked, tile.values.shape, tile.span)
+    else:
+        writer.number(NO_PREDICTION)
+        predicted = form(prediction, tile.values.shape, tile.span)
+    wide = 2 * tile.tolerance + 1
+    residuals = np.empty_like(predicted)
+    bound.residual(tile.values, predicted, wide, residuals)
+    coded = entropy.encode_residuals(residuals)
+    bound.reconstruct(predicted, residuals, wide, tile.span, predicted)
+    return Parts(bytes(writer.data), indices, coded, predicted)
+
+
+def decode(reader: Reader, shape: tuple[int, int, int], span: int, tolerance: int) -> NDArray[np.int32]:
+    """Return the lattice values of a tile (nz, ny, nx)."""
+    kind = reader.number(BLOCKS)
+    prediction: Prediction = NoPrediction()
+    if kind == BLOCKS:
+        prediction = _read_prediction(reader, shape)
+    predicted = form(prediction, shape, span)
+    residuals = entropy.decode_residuals(reader, shape)
+    bound.reconstruct(predicted, residuals, 2 * tolerance + 1, span, predicted)
+    return predicted
+
+
+def form(prediction: Prediction, shape: tuple[int, int, int], span: int) -> NDArray[np.int32]:
+    """Return the integer prediction that every decoder forms from the numbers of a prediction."""
+    if isinstance(prediction, NoPrediction):
+        return np.full(shape, (span + 1) // 2, np.int32)
+    return inverse.predict(
+        prediction.indices.reshape(prod(prediction.block), -1),
+        prediction.steps.ravel(),
+        prediction.block,
+        prediction.bases,
+        span,
+        shape,
+    )
+
+
+def check(prediction: BlockPrediction, tile: LatticeTile) -> BlockPrediction:
+    """Return a prediction with its numbers clipped to what decoders accept.
+
+    Raises
+    ------
+    stackbound.errors.PluginError
+        A shape, a dtype or a number that no decoder could use.
+    """
+    block = prediction.block
+    if len(block) != 3 or any(side not in LENGTHS for side in block) or block[0] > DEEPEST_BLOCK:
+        raise PluginError(f"block {block} is not made of lengths {LENGTHS}, at most {DEEPEST_BLOCK} along z")
+    blocks = prod(counts(tile.values.shape, block))
+    indices, steps = prediction.indices, prediction.steps
+    if indices.dtype.kind != "i" or indices.shape[:3] != block or indices.ndim != 4 or indices.shape[3] < blocks:
+        raise PluginError(f"indices of type {indices.dtype} and shape {indices.shape} do not fit blocks {block}")
+    if steps.shape != block or steps.dtype.kind != "i" or steps.min() < 1 or steps.max() > COEFFICIENT_LIMIT:
+        raise PluginError(f"steps must be whole numbers from 1 to {COEFFICIENT_LIMIT}, one per frequency")
+    for side, base in zip(block, prediction.bases, strict=True):
+        if isinstance(base, str) != (base is not None and not isinstance(base, np.ndarray)) or (
+            isinstance(base, str) and base != "dct"
+        ):
+            raise PluginError(f"basis {base!r} is not known to decoders")
+        if isinstance(base, np.ndarray) and (
+            base.shape != (side, side) or base.dtype.kind != "i" or np.abs(base).max() > MATRIX_LIMIT
+        ):
+            raise PluginError(f"a basis must hold {side} by {side} whole numbers of magnitude up to {MATRIX_LIMIT}")
+    if not exact(block, prediction.bases):
+        raise PluginError("the basis functions are so large that the inverse would not be exact")
+    clipped = np.clip(indices.reshape(prod(block), -1)[:, :blocks], -INDEX_LIMIT, INDEX_LIMIT).astype(np.int32)
+    return BlockPrediction(block, prediction.bases, steps.astype(np.int64), clipped.reshape(*block, blocks))
+
+
+def exact(block: tuple[int, ...], bases: tuple[str | NDArray[np.int64], ...]) -> bool:
+    """Return whether every partial sum of the inverse stays where float64 is exact, and its rounding too."""
+    matrices = [cosine(side) if isinstance(base, str) else base for side, base in zip(block, bases, strict=True)]
+    return widest(matrices) < 2**53
+
+
+def _write_prediction(writer: Writer, prediction: BlockPrediction) -> None:
+    writer.number(BLOCKS)
+    for side in prediction.block:
+        writer.number(side.bit_length() - 1)
+    for side, base in zip(prediction.block, prediction.bases, strict=True):
+        if isinstance(base, str):
+            writer.number(COSINE)
+        else:
+            writer.number(MATRIX)
+            for value in base.ravel().tolist():
+                writer.signed(value)
+    steps = prediction.steps.ravel()
+    uniform = bool((steps == steps[0]).all())
+    writer.number(0 if uniform else 1)
+    for step in steps[:1].tolist() if uniform else steps.tolist():
+        writer.number(step)
+
+
+def _read_prediction(reader: Reader, shape: tuple[int, int, int]) -> BlockPrediction:
+    depth, height, width = (LENGTHS[reader.number(len(LENGTHS) - 1)] for _ in range(3))
+    block = (depth, height, width)
+    if depth > DEEPEST_BLOCK or any(side >= 2 * length for side, length in zip(block, shape, strict=True)):
+        raise damaged(f"blocks {block} for a tile of {shape}")
+    bases: list[str | NDArray[np.int64]] = []
+    for side in block:
+        if reader.number(MATRIX) == COSINE:
+            bases.append("dct")
+            continue
+        values = np.array([reader.signed() for _ in range(side * side)], dtype=object)
+        if max(abs(value) for value in values) > MATRIX_LIMIT:
+            raise damaged("a basis function is too large")
+        bases.append(values.astype(np.int64).reshape(side, side))
+    if not exact(block, tuple(bases)):
+        raise damaged("basis functions are too large together")
+    frequencies = prod(block)
+    given = frequencies if reader.number(1) else 1
+    steps = np.array([reader.number(COEFFICIENT_LIMIT) for _ in range(given)], np.int64)
+    if steps.min() < 1:
+        raise damaged("a step is zero")
+    grid = counts(shape, block)
+    indices = entropy.decode_indices(reader, block, grid)
+    return BlockPrediction(
+        block, tuple(bases), np.broadcast_to(steps.reshape(-1), (frequencies,)).reshape(block).copy(),
+        indices.reshape(*block, -1),
+    )  # fmt: skip
