@@ -93,7 +93,7 @@ def _positive(text: str | None) -> float | None:
     return value if 0 < value < float("inf") else None
 
 
-def mend(xml: bytes, info: StackInfo, order: str, *, interleaved: bool, big_endian: bool) -> bytes | None:
+def mend(xml: bytes, info: StackInfo, order: str, *, planes: int, big_endian: bool) -> bytes | None:
     """Return the original OME-XML fitted to a file that holds its planes in the given order from its first page on.
 
     Identifiers and file names of the old file go, a new UUID comes; all else stays. None where the XML speaks of
@@ -107,8 +107,8 @@ def mend(xml: bytes, info: StackInfo, order: str, *, interleaved: bool, big_endi
         The stack that is written.
     order : str
         OME's DimensionOrder of the written planes ("XYCZT").
-    interleaved : bool
-        Whether channels are the samples of one page.
+    planes : int
+        Pages that are written.
     big_endian : bool
         Byte order of the written pixels.
     """
@@ -124,8 +124,6 @@ def mend(xml: bytes, info: StackInfo, order: str, *, interleaved: bool, big_endi
     namespace = found.tag[: found.tag.rfind("}") + 1]
     for old in [child for child in found if tag(child) in ("TiffData", "BinData", "MetadataOnly")]:
         found.remove(old)
-    size = dict(zip(info.axes, info.shape, strict=True))
-    planes = size.get("t", 1) * size.get("z", 1) * (1 if interleaved else size.get("c", 1))
     data = ET.Element(f"{namespace}TiffData", {"IFD": "0", "PlaneCount": str(planes)})
     # The schema wants Channel elements first, then the data, then Plane elements.
     place = max((number + 1 for number, child in enumerate(found) if tag(child) == "Channel"), default=0)

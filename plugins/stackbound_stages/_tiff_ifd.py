@@ -174,6 +174,7 @@ class _Reader:
         fields: dict[int, tuple[int, ...]] = {258: (1,)}
         places: dict[int, NDArray[np.int64]] = {}
         for code, kind, length, raw in struct.iter_unpack(self.order + form, table[:-word]):
+            self._check_value(code, kind, length, raw, number)
             if code in _OFFSETS or code in _COUNTS:
                 places[code] = self._values(code, kind, length, raw, number)
             elif code in _SHARED or code in (254, 262):
@@ -187,6 +188,16 @@ class _Reader:
         if len(counts) != len(offsets):
             raise SourceError("the page lists other numbers of strips and lengths", where=self._at(number), remedy=CUT)
         return Page(number, offset, fields, offsets, counts), self._whole(table[-word:])
+
+    def _check_value(self, code: int, kind: int, length: int, raw: bytes, number: int) -> None:
+        """Refuse a field whose value lies behind the end of the file; the text on the pages often comes last."""
+        size = length * _SIZES.get(kind, 1)
+        if size > len(raw) and self._whole(raw) + size > self.size:
+            raise SourceError(
+                f"field {code} should end at byte {self._whole(raw) + size}, but the file has only {self.size}",
+                where=self._at(number),
+                remedy=CUT,
+            )
 
     def _values(self, code: int, kind: int, length: int, raw: bytes, number: int) -> NDArray[np.int64]:
         if kind not in _WHOLE:

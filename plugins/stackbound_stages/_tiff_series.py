@@ -120,17 +120,17 @@ def stored_axes(series: tifffile.TiffPageSeries, axes: str | None, name: str) ->
             known = DROPPED
         letters.append(known)
     notes = []
-    for place in reversed(range(len(letters))):
-        if letters[place] == "?":
-            free = next((letter for letter in "ztc" if letter not in letters), None)
-            if free is None or (free == "c" and "s" in letters):
-                raise SourceError(
-                    f"the stored axes {names.lower()} ({describe_shape(shape)}) are more than t, c, z, y and x",
-                    where=name,
-                    remedy="Split the file, or say with --axes what they are.",
-                )
-            letters[place] = free
-            notes.append(f"An axis of {shape[place]} without a known name is taken as {free} (--axes decides).")
+    unknown = [place for place, letter in enumerate(letters) if letter == "?"]
+    free = [letter for letter in "ztc" if letter not in letters and not (letter == "c" and "s" in letters)]
+    if len(unknown) > len(free):
+        raise SourceError(
+            f"the stored axes {names.lower()} ({describe_shape(shape)}) are more than t, c, z, y and x",
+            where=name,
+            remedy="Split the file, or say with --axes what they are.",
+        )
+    for place, letter in zip(unknown, sorted(free[: len(unknown)], key="tcz".index), strict=True):
+        letters[place] = letter
+        notes.append(f"An axis of {shape[place]} without a known name is taken as {letter} (--axes decides).")
     stored = "".join(letters)
     if not {"y", "x"} <= set(stored):
         raise SourceError(

@@ -91,8 +91,8 @@ def _read_header(path: Path, name: str) -> tuple[tuple[int, ...], bool, np.dtype
             if version == (1, 0):
                 shape, fortran, dtype = npy_format.read_array_header_1_0(file)
             elif version in ((2, 0), (3, 0)):
-                # The public readers stop at 2.0; 3.0 differs only in the header's text encoding (numpy NEP 1).
-                shape, fortran, dtype = npy_format._read_array_header(file, version)  # type: ignore[attr-defined]
+                # 3.0 differs from 2.0 only in how names of fields are written, which pixels do not have (NumPy's NEP 1).
+                shape, fortran, dtype = npy_format.read_array_header_2_0(file)
             else:
                 raise SourceError(f"NPY version {version[0]}.{version[1]} is unknown", where=name)
             offset = file.tell()

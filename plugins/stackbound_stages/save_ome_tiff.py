@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import uuid
+from math import prod
 from pathlib import Path
 from typing import Any, ClassVar
 
@@ -13,6 +14,7 @@ from stackbound.stages import OpenSource, Save, StackInfo, Stage
 
 from ._ome_xml import PIXEL_TYPES, mend
 from ._tiff_writing import byte_order, ome_words, tiff_letters, write_tiff
+from ._writing import stored_shape
 
 
 class OmeTiffSave(Save):
@@ -37,8 +39,10 @@ class OmeTiffSave(Save):
         interleaved = SAMPLES in letters
         xml = None
         if info.ome_xml is not None:
+            shape = stored_shape(info, letters)
+            planes = prod(length for axis, length in zip(letters, shape, strict=True) if axis in "tcz")
             big_endian = byte_order(info) == ">"
-            xml = mend(info.ome_xml, info, _dimension_order(letters), interleaved=interleaved, big_endian=big_endian)
+            xml = mend(info.ome_xml, info, _dimension_order(letters), planes=planes, big_endian=big_endian)
         if xml is not None:
             write_tiff(target, source, letters, description=xml, metadata=None)
             return
