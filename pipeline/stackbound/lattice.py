@@ -81,6 +81,10 @@ class IntegerLattice:
         count = -(-self.span.bit_length() // PART_BITS)
         return [(self.span >> PART_BITS * (count - 1), 0)] + [(2**PART_BITS - 1, 0)] * (count - 1)
 
+    def describe(self) -> dict[str, int]:
+        """Return the numbers of the lattice by name."""
+        return {"minimum": self.low, "maximum": self.low + self.width, "tolerance": self.tolerance}
+
     def write(self, writer: Writer) -> None:
         """Write what `read` reads."""
         writer.signed(self.low)
@@ -163,9 +167,15 @@ def read(reader: Reader, dtype: np.dtype[Any]) -> IntegerLattice:
     if dtype.kind not in "iu":
         raise damaged(f"it holds integers, not {dtype}")
     info = np.iinfo(dtype)
-    low, width, bound = reader.signed(), reader.number(), reader.number()
-    if low < info.min or low + width > info.max:
+    found = read_any(reader)
+    if found.low < info.min or found.low + found.width > info.max:
         raise damaged(f"its values do not fit {dtype}")
+    return found
+
+
+def read_any(reader: Reader) -> IntegerLattice:
+    """Return the lattice that a payload names, whatever the pixels' type."""
+    low, width, bound = reader.signed(), reader.number(), reader.number()
     wide = reader.number(1)
     if wide and not 0 < 2 * bound < width:
         raise damaged("its lattice is not one that an encoder chooses")

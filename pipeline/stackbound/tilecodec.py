@@ -160,8 +160,26 @@ def _uncropped(pixels: NDArray[Any], shape: tuple[int, ...], last: Any) -> NDArr
 
 
 def describe(payload: bytes | memoryview | NDArray[np.uint8]) -> dict[str, Any]:
-    """Return what the bytes of one tile say about themselves: version, tolerance, lattice, prediction."""
-    return {"version": memoryview(payload).cast("B")[0]}
+    """Return what the bytes of one tile say about themselves, without decoding its streams.
+
+    Returns
+    -------
+    dict
+        ``version``, ``bytes``, ``minimum``, ``maximum`` (of the pixels, before decoding), ``tolerance``, ``mode``
+        ("constant", "none" or "transform"), and for blocks ``block`` and ``basis``.
+
+    Raises
+    ------
+    stackbound.errors.TileError
+        The bytes are damaged.
+    """
+    view = memoryview(payload).cast("B")
+    reader = Reader(_opened(view))
+    if any([reader.number() for _ in range(3)]):
+        reader.signed()
+    mapped = lattice.read_any(reader)
+    told: dict[str, Any] = {"version": view[0], "bytes": len(view), **mapped.describe()}
+    return told | tilecore.describe(reader, mapped.parts()[0][0])
 
 
 def _size(tile: LatticeTile, prediction: Prediction) -> int:

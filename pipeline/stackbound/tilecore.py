@@ -71,6 +71,16 @@ def decode(reader: Reader, shape: tuple[int, int, int], span: int, tolerance: in
     return predicted
 
 
+def describe(reader: Reader, span: int) -> dict[str, object]:
+    """Return in words what the first array of a tile is predicted with."""
+    if span == 0:
+        return {"mode": "constant"}
+    if reader.number(BLOCKS) == NO_PREDICTION:
+        return {"mode": "none"}
+    block = [LENGTHS[reader.number(len(LENGTHS) - 1)] for _ in range(3)]
+    return {"mode": "transform", "block": block}
+
+
 def form(prediction: Prediction, shape: tuple[int, int, int], span: int) -> NDArray[np.int32]:
     """Return the integer prediction that every decoder forms from the numbers of a prediction."""
     if isinstance(prediction, NoPrediction):

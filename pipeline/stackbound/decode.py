@@ -1,0 +1,507 @@
+"""Decode the tiles of a store with numpy alone.
+
+A copy of this file lies in every store beside ``DECODE.txt``, which describes the same bytes in words. It imports nothing
+of stackbound and nothing compiled, so that a store can be read when the program that wrote it can no longer be installed.
+It is slow (about a second for a million pixels) and meant for that day, and as a second opinion in the tests.
+
+``decode(payload, shape, dtype)`` returns the pixels of one inner chunk of the array. The chunks lie in shards as the Zarr
+specification of `sharding_indexed` lays down: at a shard's end an index of two little-endian uint64 per chunk, offset and
+length, and a CRC-32C of the index.
+"""
+
+from __future__ import annotations
+
+from itertools import product
+from math import cos, pi, prod, sqrt
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+VERSION = 1
+LENGTHS = (1, 2, 4, 8, 16, 32)
+
+
+class DamagedError(ValueError):
+    """The bytes are not those of a tile, or not of this one."""
+
+
+# ------------------------------------------------------------------------------------------------------ whole numbers
+
+
+class Reader:
+    """Numbers and byte strings from a payload."""
+
+    def __init__(self, data: bytes) -> None:
+        self.data, self.at = data, 0
+
+    def number(self, most: int = 2**65) -> int:
+        """Seven bits a byte, least significant first, the top bit meaning that more follow."""
+        value = 0
+        for place in range(10):
+            byte = self.take(1)[0]
+            value |= (byte & 0x7F) << (7 * place)
+            if byte < 0x80:
+                break
+        if value > most:
+            raise DamagedError(f"a number is {value} where at most {most} makes sense")
+        return value
+
+    def signed(self) -> int:
+        """0, 1, 2, 3, 4 ... stand for 0, -1, 1, -2, 2 ..."""
+        folded = self.number()
+        return -((folded + 1) >> 1) if folded & 1 else folded >> 1
+
+    def take(self, count: int) -> bytes:
+        """Return so many bytes."""
+        if self.at + count > len(self.data):
+            raise DamagedError("the bytes end too soon")
+        self.at += count
+        return self.data[self.at - count : self.at]
+
+    def sized(self) -> bytes:
+        """Return bytes that stand after their number."""
+        return self.take(self.number())
+
+
+def golomb(data: bytes, count: int) -> list[int]:
+    """Return `count` signed numbers from Golomb-Rice codes whose parameter follows the numbers."""
+    bits = np.unpackbits(np.frombuffer(data, np.uint8), bitorder="little").tolist()
+    at, spread, seen = 0, 4, 1
+    numbers = []
+    for _ in range(count):
+        low = 0
+        while seen << low < spread and low < 40:
+            low += 1
+        ones = 0
+        while ones < 32 and at < len(bits) and bits[at]:
+            ones, at = ones + 1, at + 1
+        if ones == 32:
+            low, ones = 40, 0
+        else:
+            at += 1
+        if at + low > len(bits):
+            raise DamagedError("a list of numbers ends too soon")
+        folded = (ones << low) | sum(bit << place for place, bit in enumerate(bits[at : at + low]))
+        at += low
+        numbers.append(-((folded + 1) >> 1) if folded & 1 else folded >> 1)
+        spread, seen = spread + folded, seen + 1
+        if seen == 16:
+            spread, seen = spread >> 1, seen >> 1
+    if -(-at // 8) != len(data):
+        raise DamagedError("a list of numbers does not end where it should")
+    return numbers
+
+
+# ------------------------------------------------------------------------------------------------------- range coding
+
+
+def read_tables(reader: Reader, count: int) -> tuple[list[int], list[list[int]]]:
+    """Return the group of each table, and per group 4096 slots: symbol | (slot - start) << 8 | (frequency - 1) << 20."""
+    groups = reader.number(count)
+    starts = np.unpackbits(np.frombuffer(reader.take(-(-count // 8)), np.uint8), count=count, bitorder="little")
+    group = np.cumsum(starts, dtype=np.int64).tolist()
+    numbers = reader.number(groups * 258)
+    values = iter(golomb(reader.sized(), numbers))
+    if group[-1] >= groups:
+        raise DamagedError("a table is missing")
+    slots = []
+    for _ in range(groups):
+        try:
+            first = next(values) + 128
+            last = first + next(values)
+            if not 0 <= first <= last <= 255:
+                raise DamagedError("a table makes no sense")
+            frequencies, level = [0] * 256, 0
+            for symbol in range(first, last + 1):
+                level += next(values)
+                if not 0 <= level <= 80:
+                    raise DamagedError("a table makes no sense")
+                octave = (level - 8) // 8 if level >= 16 else 0
+                frequencies[symbol] = (level - 8 * octave) << octave
+        except StopIteration:
+            raise DamagedError("a table ends too soon") from None
+        slots.append(_slots(_rescaled(frequencies)))
+    if next(values, None) is not None:
+        raise DamagedError("a table is too long")
+    return group, slots
+
+
+def _rescaled(frequencies: list[int]) -> list[int]:
+    """Scale whole numbers to a sum of 4096 in which nothing above 0 becomes 0."""
+    total = sum(frequencies)
+    if total == 0:
+        return [4096] + [0] * 255
+    scaled = [max(1, f * 4096 // total) if f else 0 for f in frequencies]
+    rest = 4096 - sum(scaled)
+    while rest < 0:
+        scaled[scaled.index(max(scaled))] -= 1
+        rest += 1
+    scaled[scaled.index(max(scaled))] += rest
+    return scaled
+
+
+def _slots(frequencies: list[int]) -> list[int]:
+    return [s | offset << 8 | (f - 1) << 20 for s, f in enumerate(frequencies) for offset in range(f)]
+
+
+class Coder:
+    """Interleaved range decoding: states of 32 bits that take in words of 16 bits."""
+
+    def __init__(self, reader: Reader, states: int) -> None:
+        self.states = np.frombuffer(reader.take(4 * states), "<u4").tolist()
+        data = reader.sized()
+        if len(data) % 2:
+            raise DamagedError("half a word")
+        self.words = np.frombuffer(data, "<u2").tolist()
+        self.at = 0
+
+    def symbol(self, lane: int, slots: list[int]) -> int:
+        """Return the next symbol of one state under one table."""
+        x = self.states[lane]
+        entry = slots[x & 4095]
+        x = ((entry >> 20) + 1) * (x >> 12) + ((entry >> 8) & 4095)
+        if x < 65536:
+            if self.at >= len(self.words):
+                raise DamagedError("the words end too soon")
+            x = x << 16 | self.words[self.at]
+            self.at += 1
+        self.states[lane] = x & 0xFFFFFFFF
+        return entry & 255
+
+    def end(self) -> None:
+        """Refuse words left over and states that are not where the encoder began."""
+        if self.at != len(self.words) or any(state != 65536 for state in self.states):
+            raise DamagedError("the range coder does not end where it should")
+
+
+def shift_of(spread: int) -> int:
+    """Return how many low bits numbers of a spread class write as they are."""
+    return (spread - 32) // 2 if spread > 33 else 0
+
+
+def table_of(spread: int) -> int:
+    """Return the table of a spread class above 0."""
+    return spread - 1 if spread <= 33 else 31 + spread % 2
+
+
+class Rest:
+    """What stands beside the symbols: low bits, and numbers that fit no symbol."""
+
+    def __init__(self, reader: Reader, most: int) -> None:
+        data = reader.sized()
+        self.bits = np.unpackbits(np.frombuffer(data, np.uint8), bitorder="little").tolist()
+        self.at, self.size = 0, len(data)
+        count = reader.number(most)
+        self.listed = golomb(reader.sized(), count) if count else []
+        self.position = 0
+
+    def number(self, symbol: int, shift: int) -> int:
+        """Return the number of a symbol."""
+        value = symbol - 128
+        if symbol == 0:
+            if self.position >= len(self.listed):
+                raise DamagedError("a listed number is missing")
+            value = self.listed[self.position]
+            self.position += 1
+        if self.at + shift > len(self.bits):
+            raise DamagedError("low bits are missing")
+        low = sum(bit << place for place, bit in enumerate(self.bits[self.at : self.at + shift]))
+        self.at += shift
+        return (((value << shift | low) + 2**31) & 0xFFFFFFFF) - 2**31
+
+    def end(self) -> None:
+        """Refuse bits and numbers left over."""
+        if self.position != len(self.listed) or -(-self.at // 8) != self.size:
+            raise DamagedError("low bits or listed numbers are left over")
+
+
+# ---------------------------------------------------------------------------------------------------------- residuals
+
+
+def read_classes(reader: Reader, shape: tuple[int, int, int]) -> NDArray[np.int64]:
+    """Return the spread class of each cell, each coded as its difference from what its neighbours foresee."""
+    group, slots = read_tables(reader, 3)
+    coder = Coder(reader, 1)
+    classes = np.zeros(shape, np.int64)
+    for z, y, x in product(*map(range, shape)):
+        before = int(classes[z - 1, y, x]) if z else -1
+        left = int(classes[z, y, x - 1]) if x else -1
+        upper = int(classes[z, y - 1, x]) if y else -1
+        if left < 0:
+            left = upper if upper >= 0 else max(before, 0)
+        if upper < 0:
+            upper = left
+        if before < 0:
+            foreseen, apart = (left + upper + 1) >> 1, abs(left - upper)
+        else:
+            foreseen = (left + upper + 2 * before + 2) >> 2
+            apart = max(left, upper, before) - min(left, upper, before)
+        context = 0 if apart <= 1 else (1 if apart <= 3 else 2)
+        value = coder.symbol(0, slots[group[context]]) - 128 + foreseen
+        if not 0 <= value <= 100:
+            raise DamagedError("an impossible class")
+        classes[z, y, x] = value
+    coder.end()
+    return classes
+
+
+def read_residuals(reader: Reader, shape: tuple[int, int, int]) -> NDArray[np.int64]:
+    """Return the residuals (nz, ny, nx): rows from top to bottom, in runs of eight of one class, one state a pixel."""
+    nz, ny, nx = shape
+    out = np.zeros(shape, np.int64)
+    if reader.number(1) == 0:
+        return out
+    classes = read_classes(reader, (nz, -(-ny // 8), -(-nx // 8)))
+    group, slots = read_tables(reader, 33)
+    coder = Coder(reader, 8)
+    rest = Rest(reader, nz * ny * nx)
+    for z, y in product(range(nz), range(ny)):
+        row = []
+        for run, spread in enumerate(classes[z, y // 8].tolist()):
+            count = min(8, nx - run * 8)
+            if spread == 0:
+                row += [128] * count
+            else:
+                table = slots[group[table_of(spread)]]
+                row += [coder.symbol(lane, table) for lane in range(count)]
+        out[z, y] = row
+    coder.end()
+    _finish(out, classes, rest)
+    return out
+
+
+def _finish(symbols: NDArray[np.int64], classes: NDArray[np.int64], rest: Rest) -> None:
+    """Turn symbols into residuals, in place and in coding order."""
+    per_pixel = classes.repeat(8, axis=1).repeat(8, axis=2)[:, : symbols.shape[1], : symbols.shape[2]]
+    special = (per_pixel > 33) | (symbols == 0)
+    values = [rest.number(s, shift_of(c)) for s, c in zip(symbols[special].tolist(), per_pixel[special].tolist())]
+    symbols -= 128
+    symbols[special] = values
+    rest.end()
+
+
+# -------------------------------------------------------------------------------------------------------- coefficients
+
+NEIGHBOURS = (((0, 0, 1), 2), ((0, 1, 0), 2), ((1, 0, 0), 2), ((0, 1, 1), 1), ((0, 0, 2), 1), ((0, 2, 0), 1))
+RATIOS = np.array([round(256 * (4 / 3 * 2 ** (j / 2) - 1 / 3)) for j in range(-3, 9)], np.int64)
+
+
+def read_indices(reader: Reader, block: tuple[int, int, int], grid: tuple[int, int, int]) -> NDArray[np.int64]:
+    """Return the indices, shape (*block, *grid)."""
+    order, bands = scan(block)
+    band_classes = np.cumsum(golomb(reader.sized(), bands[-1] + 1)).tolist()
+    if min(band_classes) < 0 or max(band_classes) > 88:
+        raise DamagedError("a band has an impossible class")
+    group, slots = read_tables(reader, 33)
+    coder = Coder(reader, 8)
+    rest = Rest(reader, prod(block) * prod(grid))
+    mean = {place: _mean_of(band_classes[band]) for place, band in zip(order, bands)}
+    indices = np.zeros((*block, *grid), np.int64)
+    for place, band in zip(order, bands):
+        base = band_classes[band]
+        if base == 0:
+            continue
+        near = [(tuple(np.subtract(place, lower)), weight) for lower, weight in NEIGHBOURS if _inside(place, lower)]
+        classes = _classes(near, base, mean, indices).ravel().tolist()
+        plane = []
+        for start in range(0, len(classes), 8):
+            part = [coder.symbol(k, slots[group[table_of(c)]]) for k, c in enumerate(classes[start : start + 8])]
+            plane += part
+        indices[place] = np.array([rest.number(s, shift_of(c)) for s, c in zip(plane, classes)]).reshape(grid)
+    coder.end()
+    rest.end()
+    _restore_means(indices[0, 0, 0])
+    return indices
+
+
+def scan(block: tuple[int, int, int]) -> tuple[list[tuple[int, ...]], list[int]]:
+    """Return the order of the frequencies (w, v, u) and the band of each place in it."""
+    bz, by, bx = block
+    places = sorted(np.ndindex(block), key=lambda f: (f[0] * 32 // bz + f[1] * 32 // by + f[2] * 32 // bx, f))
+    bands: list[int] = []
+    while len(bands) < len(places):
+        start = len(bands)
+        size = 1 if start < 16 else max(1, start // 8)
+        bands += [bands[-1] + 1 if bands else 0] * min(size, len(places) - start)
+    return places, bands
+
+
+def _inside(place: tuple[int, ...], lower: tuple[int, ...]) -> bool:
+    return all(p >= d for p, d in zip(place, lower))
+
+
+def _mean_of(band_class: int) -> int:
+    """Return the mean magnitude that a class stands for, in units of 2**-12."""
+    octave = max(band_class - 1, 0) // 2
+    return 0 if band_class == 0 else ((181 << octave) >> 7 if band_class % 2 == 0 else 1 << octave)
+
+
+def _classes(near: Any, base: int, mean: dict[Any, int], indices: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Return the class of each index of a frequency, foreseen from lower frequencies of this and the next blocks."""
+    grid = indices.shape[3:]
+    expected = 8 * sum(weight * min(mean[place], 4095 << 12) for place, weight in near)
+    if expected == 0:
+        return np.full(grid, max(base, 1))
+    own = np.zeros(grid, np.int64)
+    for place, weight in near:
+        own += weight * np.minimum(np.abs(indices[place]), 4095)
+    framed = np.pad(own, ((0, 0), (1, 1), (1, 1)), "edge")
+    around = 4 * own + framed[:, 1:-1, :-2] + framed[:, 1:-1, 2:] + framed[:, :-2, 1:-1] + framed[:, 2:, 1:-1]
+    above = sum((around > (expected * int(ratio) >> 20)).astype(np.int64) for ratio in RATIOS)
+    return np.maximum(base - 4 + above, 1)
+
+
+def _restore_means(plane: NDArray[np.int64]) -> None:
+    """Add to each mean value the median of left, upper, and their plane through both, in place."""
+    for z, y, x in product(*map(range, plane.shape)):
+        if y == 0 and x == 0:
+            foreseen = plane[z - 1, 0, 0] if z else 0
+        elif y == 0:
+            foreseen = plane[z, 0, x - 1]
+        elif x == 0:
+            foreseen = plane[z, y - 1, x]
+        else:
+            left, upper, corner = plane[z, y, x - 1], plane[z, y - 1, x], plane[z, y - 1, x - 1]
+            foreseen = sorted((left, upper, left + upper - corner))[1]
+        plane[z, y, x] = (plane[z, y, x] + foreseen + 2**31) % 2**32 - 2**31
+
+
+# --------------------------------------------------------------------------------------------------------- prediction
+
+
+def cosine(length: int) -> NDArray[np.float64]:
+    """Return the integer cosine basis in units of 2**-14, row u being the basis function of index u."""
+    rows = [[sqrt(0.5) if u == 0 else cos((2 * x + 1) * u * pi / (2 * length)) for x in range(length)]
+            for u in range(length)]  # fmt: skip
+    return np.rint(np.array(rows) * 2**14)
+
+
+def read_prediction(reader: Reader, shape: tuple[int, int, int], span: int) -> NDArray[np.int64]:
+    """Return the integer prediction of a tile: indices times steps through an integer basis, exact in float64."""
+    block = tuple(LENGTHS[reader.number(5)] for _ in range(3))
+    if block[0] > 16 or any(side >= 2 * length for side, length in zip(block, shape)):
+        raise DamagedError("a block does not fit the tile")
+    bases = []
+    for side in block:
+        if reader.number(1) == 0:
+            bases.append(cosine(side))
+        else:
+            bases.append(np.array([reader.signed() for _ in range(side * side)], np.float64).reshape(side, side))
+    count = prod(block) if reader.number(1) else 1
+    steps = np.array([reader.number(2**26) for _ in range(count)], np.float64)
+    grid = tuple(-(-length // side) for length, side in zip(shape, block))
+    indices = read_indices(reader, block, grid).astype(np.float64)
+    factors = np.broadcast_to(steps, prod(block)).reshape(*block, 1, 1, 1)
+    data = np.clip(indices * factors, -(2.0**26), 2.0**26)
+    for axis in range(3):
+        if block[axis] > 1:
+            data = np.rint(np.moveaxis(np.tensordot(bases[axis], data, ([0], [axis])), 0, axis) * 2.0**-14)
+    scale = 2.0 ** -max(0, min(8, 24 - span.bit_length()))
+    pixels = np.clip(np.rint(data * scale) + (span + 1) // 2, 0, span)
+    placed = pixels.transpose(3, 0, 4, 1, 5, 2).reshape([n * side for n, side in zip(grid, block)])
+    return placed[: shape[0], : shape[1], : shape[2]].astype(np.int64)
+
+
+def read_lattice(reader: Reader, shape: tuple[int, int, int], span: int, tolerance: int) -> NDArray[np.int64]:
+    """Return the lattice values of one array."""
+    if reader.number(1):
+        predicted = read_prediction(reader, shape, span)
+    else:
+        predicted = np.full(shape, (span + 1) // 2, np.int64)
+    return np.clip(predicted + (2 * tolerance + 1) * read_residuals(reader, shape), 0, span)
+
+
+# --------------------------------------------------------------------------------------------------------------- tile
+
+
+def decode(payload: bytes, shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
+    """Return the pixels of one tile (one inner chunk of the array).
+
+    Raises
+    ------
+    DamagedError
+        The bytes are not those of this tile, or decode to other pixels than the encoder's.
+    """
+    payload, dtype = bytes(payload), np.dtype(dtype)
+    if len(payload) < 9 or payload[0] != VERSION:
+        raise DamagedError("not a tile of a version that this file reads")
+    if crc32c(payload[5:]) != int.from_bytes(payload[1:5], "little"):
+        raise DamagedError("the checksum of the bytes does not match")
+    reader = Reader(payload[9:])
+    whole = three_axes(shape)
+    cut = [reader.number(length - 1) for length in whole]
+    last = reader.signed() if any(cut) else 0
+    kept = (whole[0] - cut[0], whole[1] - cut[1], whole[2] - cut[2])
+    pixels = np.full(whole, last, dtype)
+    pixels[: kept[0], : kept[1], : kept[2]] = read_integers(reader, kept)
+    if reader.at != len(reader.data):
+        raise DamagedError("bytes are left over")
+    little = pixels.astype(dtype.newbyteorder("<"), copy=False).tobytes()
+    if crc32c(little, crc32c(payload[9:33])) != int.from_bytes(payload[5:9], "little"):
+        raise DamagedError("the pixels are not those that the encoder saw")
+    return pixels.reshape(shape)
+
+
+def three_axes(shape: tuple[int, ...]) -> tuple[int, int, int]:
+    """Return the shape without axes of length 1, leading ones merged or filled up with 1."""
+    long = [1, 1, 1] + [length for length in shape if length != 1]
+    return prod(long[:-2]), long[-2], long[-1]
+
+
+def read_integers(reader: Reader, shape: tuple[int, int, int]) -> NDArray[Any]:
+    """Return integer pixels: ``min(low + unit * value, low + width)``, in Python's numbers where 64 bits are needed."""
+    low, width, tolerance = reader.signed(), reader.number(), reader.number()
+    unit = 2 * tolerance + 1 if reader.number(1) else 1
+    span = (width + unit // 2) // unit
+    if span <= 2**24 - 1:
+        value = read_lattice(reader, shape, span, min(tolerance, span) if unit == 1 else 0).astype(object)
+    else:
+        value = np.zeros(shape, object)
+        count = -(-span.bit_length() // 16)
+        for place in range(count):
+            part = span >> 16 * (count - 1) if place == 0 else 2**16 - 1
+            value = value * 2**16 + read_lattice(reader, shape, part, 0)
+    return low + np.minimum(value * unit, width)
+
+
+# ----------------------------------------------------------------------------------------------------------- checksum
+
+
+def crc32c(data: bytes, seed: int = 0) -> int:
+    """Return the CRC-32C (RFC 3720) of `data`, or of what has the CRC-32C `seed` followed by `data`.
+
+    Pieces of equal length go through the table side by side; a checksum over zeros is linear, so the pieces' checksums
+    are joined by the 32 by 32 matrix over GF(2) that running over one piece of zeros is.
+    """
+    piece = max(1, int(sqrt(len(data))) // 2)
+    count = len(data) // piece
+    state = seed ^ 0xFFFFFFFF
+    if count > 1:
+        columns = np.frombuffer(data, np.uint8, count * piece).reshape(count, piece).T
+        sums = np.zeros(count, np.uint32)
+        basis = np.uint32(1) << np.arange(32, dtype=np.uint32)
+        for column in columns:
+            sums = _TABLE[(sums ^ column) & np.uint32(0xFF)] ^ (sums >> np.uint32(8))
+            basis = _TABLE[basis & np.uint32(0xFF)] ^ (basis >> np.uint32(8))
+        matrix = basis.tolist()
+        for value in sums.tolist():
+            over = 0
+            for bit in range(32):
+                over ^= matrix[bit] if state >> bit & 1 else 0
+            state = over ^ value
+        data = data[count * piece :]
+    table = _TABLE.tolist()
+    for byte in data:
+        state = table[(state ^ byte) & 0xFF] ^ (state >> 8)
+    return state ^ 0xFFFFFFFF
+
+
+def _crc_table() -> NDArray[np.uint32]:
+    table = np.arange(256, dtype=np.uint32)
+    for _ in range(8):
+        table = np.where(table & np.uint32(1), (table >> np.uint32(1)) ^ np.uint32(0x82F63B78), table >> np.uint32(1))
+    return table
+
+
+_TABLE = _crc_table()
