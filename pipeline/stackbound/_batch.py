@@ -27,27 +27,49 @@ class Job:
 
 
 @dataclass(frozen=True)
+class Result:
+    """What became of one job: a report, an error with its exit code, or a store that was finished before."""
+
+    job: Job
+    report: CompressReport | None = None
+    error: str = ""
+    exit_code: int = 0
+
+    @property
+    def finished_before(self) -> bool:
+        """Whether a run that was continued had finished this store already."""
+        return self.report is None and self.exit_code == 0
+
+    def to_json(self) -> dict[str, Any]:
+        """Return the result as plain JSON values."""
+        facts: dict[str, Any] = {"source": self.job.label, "store": str(self.job.store), "exit_code": self.exit_code}
+        if self.report is not None:
+            return facts | {"report": self.report.to_json()}
+        return facts | ({"finished_before": True} if self.finished_before else {"error": self.error})
+
+
+@dataclass(frozen=True)
 class Outcome:
-    """What became of several sources: the report of each job, or its error and exit code."""
+    """What became of several sources."""
 
     folder: Path
-    results: tuple[tuple[Job, CompressReport | None, str, int], ...]
+    results: tuple[Result, ...]
+
+    @property
+    def failed(self) -> int:
+        """Number of sources that ended with an error."""
+        return sum(result.exit_code != 0 for result in self.results)
 
     @property
     def exit_code(self) -> int:
         """The gravest of all exit codes: a broken promise, then a fault of the program, then unusable input."""
-        codes = {code for *_, code in self.results}
+        codes = {result.exit_code for result in self.results}
         return next((code for code in (3, 1, 2) if code in codes), 0)
 
     def to_json(self) -> dict[str, Any]:
         """Return the summary as plain JSON values."""
-        results = [
-            {"source": job.label, "store": str(job.store), "exit_code": code}
-            | ({"report": report.to_json()} if report is not None else {"error": error})
-            for job, report, error, code in self.results
-        ]
-        failed = sum(report is None for _, report, *_ in self.results)
-        return {"schema_version": 1, "sources": len(results), "failed": failed, "results": results}
+        results = [result.to_json() for result in self.results]
+        return {"schema_version": 1, "sources": len(results), "failed": self.failed, "results": results}
 
     def text(self) -> str:
         """Return the summary for people."""
@@ -123,23 +145,50 @@ def compress_one(job: Job, options: Mapping[str, Any], progress: Progress) -> Co
     """Run one job with the options of the command line."""
     import stackbound
 
-    return stackbound.compress(job.source, job.store, progress=progress, **options)
+    try:
+        return stackbound.compress(job.source, job.store, progress=progress, **options)
+    except KeyboardInterrupt:
+        progress.end()
+        partial = job.store.with_name(job.store.name + ".partial")
+        if partial.exists():
+            message(f"What is finished is kept in {partial.name}; the same command with --resume continues there.")
+        raise
 
 
 def compress_all(jobs: list[Job], options: Mapping[str, Any], progress: Progress) -> Outcome:
     """Run all jobs, one after the other; a failure is told at once and the rest goes on."""
-    results: list[tuple[Job, CompressReport | None, str, int]] = []
+    results: list[Result] = []
     folder = jobs[0].store.parent
-    if not options.get("dry_run"):
+    if not options["dry_run"]:
         folder.mkdir(parents=True, exist_ok=True)
     for number, job in enumerate(jobs, start=1):
         message(f"[{number}/{len(jobs)}] {job.label}")
         try:
-            results.append((job, compress_one(job, options, progress), "", 0))
+            if options["resume"] and not options["overwrite"] and _finished(job.store, options):
+                results.append(Result(job))
+            else:
+                results.append(Result(job, compress_one(job, options, progress)))
         except StackboundError as error:
-            results.append((job, None, str(error), exit_code_of(error)))
+            results.append(Result(job, error=str(error), exit_code=exit_code_of(error)))
         except Exception as error:  # noqa: BLE001  # one bad source must not cost a night's run of the others
-            results.append((job, None, f"{type(error).__name__}: {error}", exit_code_of(error)))
+            results.append(Result(job, error=f"{type(error).__name__}: {error}", exit_code=exit_code_of(error)))
         finally:
             progress.end()
     return Outcome(folder, tuple(results))
+
+
+def _finished(store: Path, options: Mapping[str, Any]) -> bool:
+    """Return whether a store was finished with the same configuration by the same version."""
+    import stackbound
+
+    from .config import read_config
+    from .inspect import is_store
+    from .store import read_store
+
+    if not is_store(store):
+        return False
+    for plugin in options["plugins"]:
+        stackbound.use_plugin(plugin)
+    config = read_config(options["config"], tolerance=options["tolerance"], unit=options["unit"])
+    attributes = read_store(store).attributes
+    return (attributes["configuration"], attributes["version"]) == (config.record(), stackbound.__version__)

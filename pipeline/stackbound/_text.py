@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from .environment import format_size
 
 if TYPE_CHECKING:
-    from ._batch import Outcome
+    from ._batch import Outcome, Result
     from .reports import CompressReport, RestoreReport, VerifyReport
 
 _WIDTH = 100
@@ -32,11 +32,11 @@ def compress(report: CompressReport) -> str:
     if report.dry_run:
         rows = [
             ("source", _stack(report.kind, report.axes, report.shape, report.dtype, report.source_bytes)),
-            ("tiles", f"{_shape(report.tile)} in regions of {_shape(report.region)}, {report.regions} regions"),
+            ("tiles", f"{_shape(report.tile)}, in {_many(report.regions, 'region')} of {_shape(report.region)}"),
             ("store", f"about {format_size(report.store_bytes)}, {_ratio(report)}, judged from a sample"),
             ("promise", report.promise["words"]),
-            ("limits", f"{report.workers} workers, {format_size(report.memory)} of memory"),
-            ("nothing", "was written: this was a dry run."),
+            ("limits", f"{_many(report.workers, 'worker')}, {format_size(report.memory)} of memory"),
+            ("dry run", "nothing was written"),
         ]
         return _block(str(report.store), [*rows, *_notes(report.notes)])
     rows = [
@@ -49,36 +49,40 @@ def compress(report: CompressReport) -> str:
         ("", "Keep this line elsewhere: with it anyone can tell later whether the store was replaced."),
     ]
     if report.resumed:
-        rows.insert(1, ("resumed", f"{report.resumed} of {report.regions} regions were there already"))
+        rows.insert(
+            1, ("resumed", f"{report.resumed} of {_many(report.regions, 'region')} kept from the interrupted run")
+        )
     return _block(str(report.store), [*rows, *_notes(report.notes)])
 
 
 def batch(outcome: Outcome) -> str:
     """Return the summary of several sources."""
-    lines = []
-    width = max(len(job.store.name) for job, *_ in outcome.results)
-    for job, report, error, _ in outcome.results:
-        name = job.store.name.ljust(width)
-        if report is None:
-            lines.append(f"  {name}  failed: {error}")
-        elif report.dry_run:
-            lines.append(f"  {name}  about {format_size(report.store_bytes)}, {_ratio(report)}")
-        else:
-            size = f"{format_size(report.store_bytes)}, {_ratio(report)}"
-            lines.append(f"  {name}  {size}, largest error {report.largest_error}")
-            lines.append(f"  {' ' * width}  root {report.root}")
-            lines += [f"  {' ' * width}  note: {note}" for note in report.notes]
-    done = [report for _, report, *_ in outcome.results if report is not None]
-    failed = len(outcome.results) - len(done)
-    total = f"{len(done)} of {len(outcome.results)} sources done"
-    if done:
-        before, after = sum(r.source_bytes for r in done), sum(r.store_bytes for r in done)
-        total += f": {format_size(before)} became {format_size(after)}"
-    if failed:
-        total += f"; {failed} failed"
-    if done and not done[0].dry_run:
-        total += ". Keep the roots elsewhere: with them anyone can tell later whether a store was replaced"
-    return "\n".join([str(outcome.folder), *lines, f"{total}."])
+    lines = [str(outcome.folder)]
+    width = max(len(result.job.store.name) for result in outcome.results)
+    for result in outcome.results:
+        text, *more = _batch_lines(result)
+        lines.append(f"  {result.job.store.name:<{width}}  {text}")
+        lines += [f"  {'':<{width}}  {line}" for line in more]
+    reports = [result.report for result in outcome.results if result.report is not None]
+    before = sum(report.source_bytes for report in reports)
+    after = sum(report.store_bytes for report in reports)
+    total = f"{len(outcome.results) - outcome.failed} of {len(outcome.results)} sources done"
+    total += f": {format_size(before)} became {format_size(after)}" if reports else ""
+    total += f"; {outcome.failed} failed" if outcome.failed else ""
+    lines.append(f"{total}.")
+    if reports and not reports[0].dry_run:
+        lines.append("Keep the roots elsewhere: with them anyone can tell later whether a store was replaced.")
+    return "\n".join(lines)
+
+
+def _batch_lines(result: Result) -> list[str]:
+    report = result.report
+    if report is None:
+        return ["finished by an earlier run"] if result.finished_before else [f"failed: {result.error}"]
+    if report.dry_run:
+        return [f"about {format_size(report.store_bytes)}, {_ratio(report)}"]
+    first = f"{format_size(report.store_bytes)}, {_ratio(report)}, largest error {report.largest_error}"
+    return [first, f"root {report.root}", *(f"note: {note}" for note in report.notes)]
 
 
 def verify(report: VerifyReport) -> str:
@@ -90,7 +94,7 @@ def verify(report: VerifyReport) -> str:
     if report.largest_error is not None:
         measured = "measured again now" if report.against else "as recorded when the store was made"
         rows.append(("error", f"{report.largest_error} at most, {measured}"))
-    rows.append(("decoded", f"{_count(report.pixels)} pixels in {_count(report.regions)} regions"))
+    rows.append(("decoded", f"{_many(report.pixels, 'pixel')} in {_many(report.regions, 'region')}"))
     rows += [("checked", check) for check in report.checks]
     rows += [("notice", notice) for notice in report.notices]
     rows += [("not proven", limit) for limit in report.cannot_prove]
@@ -198,7 +202,7 @@ def _found(largest: str | None, promise: Mapping[str, Any], pixels: int, changed
     bound = bounds[0] if len(bounds) == 1 else "the tolerance of each channel"
     share = f"{100 * changed / pixels:.3g} %" if pixels else "none"
     return (
-        f"largest error {largest} (allowed: {bound}), read back from disk and compared in all {_count(pixels)} pixels; "
+        f"largest error {largest} (allowed: {bound}), read back from disk and compared in {_many(pixels, 'pixel')}; "
         f"{share} of them changed"
     )
 
@@ -220,3 +224,7 @@ def _notes(notes: Iterable[str]) -> list[tuple[str, str]]:
 
 def _count(number: int) -> str:
     return f"{number:,}"
+
+
+def _many(number: int, what: str) -> str:
+    return f"{_count(number)} {what}" if number == 1 else f"{_count(number)} {what}s"

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import json
 import os
+import signal
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 import numpy as np
@@ -123,6 +125,23 @@ def test_the_summary_of_several_sources_as_json(here, capfd):
     assert (2, 1) == (summary["sources"], summary["failed"])
 
 
+def test_several_sources_are_resumed_where_they_stopped(here, capfd):
+    """--resume leaves finished stores of the same configuration alone and makes the missing ones."""
+    write_stack("one.tif")
+    (here / "two.tif").write_text("no image")
+    command = ["compress", "one.tif", "two.tif", "stores", "--tolerance"]
+    cli.run([*command, "2"])
+    first = (here / "stores" / "one.ome.zarr" / "zarr.json").stat().st_mtime_ns
+    write_stack("two.tif")
+    capfd.readouterr()
+
+    assert 0 == cli.run([*command, "2", "--resume"])
+    assert "finished by an earlier run" in capfd.readouterr().out
+    assert first == (here / "stores" / "one.ome.zarr" / "zarr.json").stat().st_mtime_ns
+    assert 2 == cli.run([*command, "3", "--resume"])
+    assert "exists already" in capfd.readouterr().err
+
+
 @pytest.mark.parametrize(
     ("words", "text"),
     [
@@ -162,7 +181,7 @@ def test_a_dry_run_writes_nothing(here, capfd):
     before = tree(here)
 
     assert 0 == cli.run(["compress", "embryo.tif", "embryo.ome.zarr", "--tolerance", "3", "--dry-run"])
-    assert "this was a dry run" in capfd.readouterr().out
+    assert "nothing was written" in capfd.readouterr().out
     assert before == tree(here)
 
 
@@ -241,7 +260,9 @@ def make_nothing() -> None:
 
 
 @pytest.mark.parametrize(
-    "make", [function for name, function in list(globals().items()) if name.startswith("make_")], ids=lambda f: f.__name__
+    "make",
+    [function for name, function in list(globals().items()) if name.startswith("make_")],
+    ids=lambda f: f.__name__,
 )
 def test_a_bad_source_is_one_message(here, capfd, make):
     """Every unusable source ends with exit code 2, one message that names it, no traceback, and nothing left behind."""
@@ -371,6 +392,23 @@ def test_every_error_has_its_exit_code(here, capfd, monkeypatch, error, code):
 
     assert code == cli.run(["inspect", "embryo.tif"])
     assert "Traceback" not in capfd.readouterr().err
+
+
+@pytest.mark.skipif(os.name != "posix", reason="signals work otherwise on this system")
+def test_interruption_is_exit_code_130_and_no_store(here):
+    """Ctrl-C ends a run at once with 130 and without a traceback; nothing stands under the final name."""
+    np.save("big.npy", pixels(24, 1024, 1024))
+    command = [sys.executable, "-m", "stackbound.cli", "compress", "big.npy", "big.ome.zarr", "--tolerance", "1"]
+    with subprocess.Popen(command, stderr=subprocess.PIPE, text=True) as run:
+        while run.poll() is None and not (here / "big.ome.zarr.partial").exists():
+            time.sleep(0.01)
+        run.send_signal(signal.SIGINT)
+        err = run.communicate()[1]
+
+    assert 130 == run.returncode
+    assert "Interrupted." in err
+    assert "Traceback" not in err
+    assert not (here / "big.ome.zarr").exists()
 
 
 def test_help_imports_nothing_heavy():
