@@ -200,10 +200,9 @@ def _ratio(report: CompressReport) -> str:
 def _found(largest: str | None, promise: Mapping[str, Any], pixels: int, changed: int) -> str:
     bounds = promise["stored"]
     bound = bounds[0] if len(bounds) == 1 else "the tolerance of each channel"
-    share = f"{100 * changed / pixels:.3g} %" if pixels else "none"
     return (
-        f"largest error {largest} (allowed: {bound}), read back from disk and compared in {_many(pixels, 'pixel')}; "
-        f"{share} of them changed"
+        f"largest error {largest} (allowed: {bound}); all {_many(pixels, 'pixel')} were read back from disk and "
+        f"compared, {100 * changed / pixels:.3g} % of them changed"
     )
 
 
