@@ -107,11 +107,11 @@ def stored_axes(series: tifffile.TiffPageSeries, axes: str | None, name: str) ->
     """Return one letter of "tczyxs-" and one length per stored axis, and remarks on what was assumed.
 
     Axes of length 1 stay only where the file itself names them one by one, as tifffile's shape description does; the
-    OME model always has five and ImageJ always three, so there they say nothing.
+    OME model always has five and ImageJ always three, so there they say nothing (tifffile leaves them out by itself).
     """
-    shape, names = tuple(series.get_shape(squeeze=False)), series.get_axes(squeeze=False).upper()
+    shape, names = tuple(series.shape), series.axes.upper()
     if axes is not None:
-        return _by_user(axes, shape, names, name), shape, []
+        return apply_axes(axes, shape, name), shape, []
     keep = series.kind == "shaped"
     letters = []
     for letter, length in zip(names, shape, strict=True):
@@ -137,13 +137,6 @@ def stored_axes(series: tifffile.TiffPageSeries, axes: str | None, name: str) ->
             f"the stored axes {names.lower()} have no y and x", where=name, remedy="Name them with --axes."
         )
     return stored, shape, notes
-
-
-def _by_user(axes: str, shape: tuple[int, ...], names: str, name: str) -> str:
-    # tifffile adds a sample axis of length 1 to some kinds; nobody who types --axes knows of it.
-    if names.endswith("S") and shape[-1] == 1 and len(axes.strip()) == len(shape) - 1:
-        return apply_axes(axes, shape[:-1], name) + DROPPED
-    return apply_axes(axes, shape, name)
 
 
 def check_complete(tiff: tifffile.TiffFile, series: tifffile.TiffPageSeries, table: PageTable, name: str) -> None:

@@ -91,7 +91,7 @@ def _read_header(path: Path, name: str) -> tuple[tuple[int, ...], bool, np.dtype
             if version == (1, 0):
                 shape, fortran, dtype = npy_format.read_array_header_1_0(file)
             elif version in ((2, 0), (3, 0)):
-                # 3.0 differs from 2.0 only in how names of fields are written, which pixels do not have (NumPy's NEP 1).
+                # 3.0 differs from 2.0 only in the encoding of names of fields, which pixels do not have.
                 shape, fortran, dtype = npy_format.read_array_header_2_0(file)
             else:
                 raise SourceError(f"NPY version {version[0]}.{version[1]} is unknown", where=name)
