@@ -172,9 +172,9 @@ def round_to(pixels: NDArray[Any], tolerance: float) -> NDArray[Any]:
         return np.ascontiguousarray(pixels)
     if pixels.dtype.kind == "f":
         step = pixels.dtype.type(2 * tolerance)
-        return (np.rint(pixels / step) * step).astype(pixels.dtype)
+        return np.asarray(np.rint(pixels / step) * step, pixels.dtype)
     wide = np.int32 if pixels.dtype.itemsize <= 2 else np.int64
     limits = np.iinfo(pixels.dtype)
     width = 2 * int(tolerance) + 1
     rounded = np.floor_divide(pixels.astype(wide) + int(tolerance), width) * width
-    return np.clip(rounded, limits.min, limits.max).astype(pixels.dtype)
+    return np.asarray(np.clip(rounded, limits.min, limits.max), pixels.dtype)

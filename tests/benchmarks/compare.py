@@ -64,7 +64,7 @@ def compare(
     repeat: int,
 ) -> list[Measurement]:
     """Measure every coder at every tolerance, `repeat` times in turn."""
-    rows = []
+    rows: list[Measurement] = []
     about = (stack.name, stack.pixels.shape, str(stack.pixels.dtype), noise)
     for multiple, tolerance in tolerances:
         floor = stack.floor(int(tolerance)) if stack.floor else None

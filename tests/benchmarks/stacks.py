@@ -70,7 +70,7 @@ def _only_file(path: Path) -> Path:
 def _load_dicom(path: Path) -> Stack:
     """Stack the raw stored values of a DICOM file or series, by instance number."""
     import pydicom
-    from pydicom.pixels import pixel_array
+    from pydicom.pixels.utils import pixel_array
 
     files = sorted(path.glob("*.dcm"), key=lambda p: _natural(p.name)) if path.is_dir() else [path]
     files.sort(key=lambda p: int(pydicom.dcmread(p, stop_before_pixels=True).get("InstanceNumber") or 0))
@@ -82,8 +82,8 @@ def _load_dicom(path: Path) -> Stack:
 
 def synthetic() -> list[Stack]:
     """Return stacks of invented scenes through known cameras, and one through a photomultiplier of few photons."""
-    bright, dim = light_sheet((8, 768, 768)), light_sheet((8, 768, 768))
-    dim = replace(dim, scene=replace(dim.scene, brightness=0.15), name="invented dim light-sheet stack")
+    bright = light_sheet((8, 768, 768))
+    dim = replace(light_sheet((8, 768, 768), brightness=0.15), name="invented dim light-sheet stack")
     made = (bright, dim, electron_micrograph((4, 1024, 1024)), confocal((16, 512, 512)))
     return [_of_camera(stack) for stack in made]
 
