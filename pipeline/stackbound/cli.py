@@ -75,7 +75,12 @@ def cli() -> None:
     metavar="N",
     help="The largest change that any pixel may suffer; 0 stores without loss. Kept exactly as written.",
 )
-@click.option("--unit", metavar="U", help="Unit of the tolerance: stored (stored pixel values, the default).")
+@click.option(
+    "--unit",
+    metavar="U",
+    help="Unit of the tolerance: stored (stored pixel values, the default) or range (a fraction of each channel's own"
+    " range, largest minus smallest value).",
+)
 @click.option("--config", metavar="FILE|NAME", help="A TOML file, or the name of a shipped recipe.")
 @click.option("--axes", metavar="A", help="Axes of the source in stored order, such as tzyx, where it does not say.")
 @click.option("--plugin", "plugins", metavar="FILE", multiple=True, help="A Python file with stages; may be repeated.")

@@ -1,27 +1,18 @@
-"""The range of each channel of a stack, for tolerances that are fractions of it; and what such a tolerance means."""
+"""The range of each channel of a stack, for tolerances that are fractions of it."""
 
 from __future__ import annotations
 
 import math
-import sys
-from collections.abc import Sequence
-from decimal import ROUND_DOWN, Context, Decimal
 from fractions import Fraction
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound.errors import UsageError
 from stackbound.geometry import box_at, positions
-from stackbound.numbers import decimal
 from stackbound.regions import read_source
 from stackbound.reports import Progress, Quiet
 from stackbound.stages import Grid, OpenSource, StackInfo
-from stackbound.tolerance import exact_decimal
-
-_EXACT = Context(prec=2000, rounding=ROUND_DOWN)
-"""More digits than a tolerance has; should one have more, the product is rounded down."""
 
 
 def channel_ranges(
@@ -83,40 +74,3 @@ def _finite_span(pixels: NDArray[Any]) -> tuple[Any, Any] | None:
             return None
         low, high = finite.min(), finite.max()
     return low.item(), high.item()
-
-
-def tolerances(value: Decimal, ranges: Sequence[Fraction], floats: bool) -> tuple[str, ...]:
-    """Return what a fraction of each channel's range is in stored pixel values.
-
-    Parameters
-    ----------
-    value : decimal.Decimal
-        The fraction, between 0 and 1.
-    ranges : sequence of fractions.Fraction
-        From `channel_ranges`.
-    floats : bool
-        Whether the pixels are floating-point numbers; then each tolerance is the float64 at or below the product.
-
-    Raises
-    ------
-    stackbound.errors.UsageError
-        The fraction is above 1.
-    """
-    if value > 1:
-        raise UsageError(
-            f"A tolerance of {value} is more than the whole range of the pixels.",
-            where="--tolerance",
-            remedy="With the unit 'range', 0.01 is one per cent; for stored pixel values use the unit 'stored'.",
-        )
-    if floats:
-        return tuple(decimal(_float_at_or_below(Fraction(value) * span)) for span in ranges)
-    # The range of integers is whole, so its product with a decimal is a decimal, exactly.
-    return tuple(str(exact_decimal(_EXACT.multiply(value, Decimal(int(span))))) for span in ranges)
-
-
-def _float_at_or_below(exact: Fraction) -> float:
-    try:
-        number = float(exact)
-    except OverflowError:
-        return sys.float_info.max
-    return number if Fraction(number) <= exact else math.nextafter(number, 0.0)

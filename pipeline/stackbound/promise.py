@@ -3,16 +3,19 @@
 from __future__ import annotations
 
 import math
+import sys
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from decimal import Decimal
+from decimal import ROUND_DOWN, Context, Decimal
 from fractions import Fraction
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from stackbound.errors import ConfigError, IntegrityError
+from stackbound.errors import IntegrityError, UsageError
 from stackbound.geometry import Box
+from stackbound.numbers import decimal
+from stackbound.tolerance import exact_decimal
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -22,6 +25,9 @@ if TYPE_CHECKING:
     from stackbound.tolerance import Tolerance
 
 Number = int | float
+
+# More digits than a tolerance has; should one have more, a product with it is rounded down.
+_EXACT = Context(prec=2000, rounding=ROUND_DOWN)
 
 
 @dataclass(frozen=True)
@@ -124,22 +130,59 @@ def stored_number(text: str, floats: bool) -> Number:
     exact = Fraction(Decimal(text))
     if not floats:
         return math.floor(exact)
+    return float_at_or_below(exact)
+
+
+def float_at_or_below(exact: Fraction) -> float:
+    """Return the largest float64 that is not above a number that is not negative."""
     try:
         number = float(exact)
     except OverflowError:
-        return np.finfo(np.float64).max.item()
+        return sys.float_info.max
     return number if Fraction(number) <= exact else math.nextafter(number, 0.0)
 
 
-def resolve(tolerance: Tolerance, info: StackInfo) -> Promise:
+def resolve(tolerance: Tolerance, info: StackInfo, ranges: Sequence[Fraction] | None = None) -> Promise:
     """Return the promise that a tolerance means for a stack.
+
+    Parameters
+    ----------
+    tolerance : Tolerance
+        As the user wrote it.
+    info : StackInfo
+        The stack.
+    ranges : sequence of fractions.Fraction, optional
+        Largest minus smallest finite value of each channel, for the unit "range".
 
     Raises
     ------
-    stackbound.errors.ConfigError
-        The unit does not apply to this stack.
+    stackbound.errors.UsageError
+        The unit "range" with a value above 1.
     """
     floats = info.dtype.kind == "f"
+    value = str(tolerance.value)
     if tolerance.unit == "stored":
-        return Promise(str(tolerance.value), "stored", (str(tolerance.value),), info.axes, floats)
-    raise ConfigError(f"The unit '{tolerance.unit}' is not known.", where="tolerance.unit")
+        return Promise(value, "stored", (value,), info.axes, floats)
+    if ranges is None:
+        raise TypeError("a tolerance as a fraction of the range needs the ranges")
+    return Promise(value, "range", shares(tolerance.value, ranges, floats), info.axes, floats)
+
+
+def shares(value: Decimal, ranges: Sequence[Fraction], floats: bool) -> tuple[str, ...]:
+    """Return what a fraction of each channel's range is in stored pixel values.
+
+    Raises
+    ------
+    stackbound.errors.UsageError
+        The fraction is above 1.
+    """
+    if value > 1:
+        raise UsageError(
+            f"A tolerance of {value} is more than the whole range of the pixels.",
+            where="--tolerance",
+            remedy="With the unit 'range', 0.01 is one per cent; for stored pixel values use the unit 'stored'.",
+        )
+    if floats:
+        return tuple(decimal(float_at_or_below(Fraction(value) * span)) for span in ranges)
+    # The range of integers is whole, so its product with a decimal is a decimal, exactly.
+    return tuple(str(exact_decimal(_EXACT.multiply(value, Decimal(int(span))))) for span in ranges)

@@ -19,6 +19,7 @@ from stackbound import environment
 from stackbound.budget import Budget, budget
 from stackbound.config import Pipeline, PipelineConfig, build, read_config
 from stackbound.errors import PluginError, SourceChangedError, StackboundError, TargetError, UsageError
+from stackbound.extent import channel_ranges
 from stackbound.finish import complete_store
 from stackbound.geometry import counts
 from stackbound.journal import Journal
@@ -85,7 +86,8 @@ def compress(
     tolerance : int, float, str or decimal.Decimal, optional
         For every pixel, abs(original - decoded) <= tolerance; 0 stores without loss. Wins over that of `config`.
     unit : str, optional
-        Unit of `tolerance`: "stored" (stored pixel values, the default).
+        Unit of `tolerance`: "stored" (stored pixel values, the default) or "range" (a fraction of each channel's own
+        range, largest minus smallest finite value).
     config : path, str or mapping, optional
         A TOML file, the name of a shipped recipe, or the same as a mapping.
     axes : str, optional
@@ -128,7 +130,7 @@ def compress(
     target.check(resume=resume, overwrite=overwrite)
     with _few_threads(), open_source(source, axes=axes, registry=registry()) as opened:
         target.check_source(file.path for file in opened.files)
-        plan = _plan(opened, pipeline, scale, workers, memory)
+        plan = _plan(opened, pipeline, scale, workers, memory, progress or Quiet())
         if dry_run:
             return _report(plan, target, workers, memory, dry_run=True, store_bytes=_estimated_bytes(plan))
         with target.lock:
@@ -164,15 +166,18 @@ def _plan(
     scale: Sequence[float] | Mapping[str, float] | None,
     workers: int,
     memory: int,
+    progress: Progress,
 ) -> Plan:
     """Decide everything that the bytes of the store depend on, from the source and the configuration alone."""
     import stackbound
 
     info = _with_scale(opened.info, scale)
-    promise = resolve(pipeline.config.tolerance, info)
     grid = pipeline.tile.grid(info, opened)
     _check_grid(grid, info, pipeline.tile.name)
     limits = budget(memory, workers, info, grid)
+    tolerance = pipeline.config.tolerance
+    ranges = channel_ranges(opened, info, grid, progress) if tolerance.unit == "range" else None
+    promise = resolve(tolerance, info, ranges)
     coder = TileCoder(pipeline.predict, pipeline.encode)
     sample = sample_tiles(opened, info, grid)
     coder = coder.planned([tile for _, tile in sample], [promise.for_tile(box.start, grid.tile) for box, _ in sample])

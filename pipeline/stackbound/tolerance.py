@@ -11,9 +11,9 @@ from pydantic import BaseModel, ConfigDict, PlainSerializer, PlainValidator, Wit
 
 __all__ = ["UNITS", "Tolerance", "Unit", "exact_decimal"]
 
-Unit = Literal["stored"]
+Unit = Literal["stored", "range"]
 UNITS: tuple[str, ...] = get_args(Unit)
-"""The units of a tolerance: `stored` is stored pixel values."""
+"""The units of a tolerance: `stored` is stored pixel values, `range` a fraction of each channel's own range."""
 
 _DECIMAL = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)(e[+-]?\d{1,4})?", re.ASCII | re.IGNORECASE)
 

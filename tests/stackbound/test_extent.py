@@ -7,10 +7,12 @@ from fractions import Fraction
 
 import numpy as np
 import pytest
+import stackbound
 from hypothesis import given
 from hypothesis import strategies as st
 from stackbound.errors import UsageError
-from stackbound.extent import channel_ranges, tolerances
+from stackbound.extent import channel_ranges
+from stackbound.promise import shares
 from stackbound.stages import Grid, OpenSource, StackInfo
 
 
@@ -67,7 +69,7 @@ def test_only_finite_values_make_a_range(values, span):
 )
 def test_a_fraction_of_whole_numbers_is_exact(value, span):
     """The tolerance of integer pixels is the exact product."""
-    (text,) = tolerances(value, [Fraction(span)], floats=False)
+    (text,) = shares(value, [Fraction(span)], floats=False)
 
     assert Fraction(value) * span == Fraction(Decimal(text))
 
@@ -78,14 +80,32 @@ def test_a_fraction_of_whole_numbers_is_exact(value, span):
 )
 def test_a_fraction_of_floats_is_never_above(value, span):
     """The tolerance of float pixels is a float64 that is never above the exact product, and the largest such."""
-    (text,) = tolerances(value, [Fraction(span)], floats=True)
+    (text,) = shares(value, [Fraction(span)], floats=True)
     exact = Fraction(value) * Fraction(span)
 
     assert Fraction(float(text)) <= exact
     assert Fraction(float(np.nextafter(float(text), np.inf))) > exact
 
 
+def test_every_channel_keeps_its_own_tolerance(tmp_path):
+    """A store made with the unit "range" keeps each channel within its own tolerance, and says so."""
+    rng = np.random.default_rng(4)
+    stack = np.stack([rng.poisson(level, (6, 40, 50)) for level in (20, 4000)]).astype(np.uint16)
+    spans = [int(channel.max()) - int(channel.min()) for channel in stack]
+    np.save(tmp_path / "two.npy", stack)
+    report = stackbound.compress(
+        tmp_path / "two.npy", tmp_path / "two.ome.zarr", axes="czyx", tolerance="0.02", unit="range"
+    )
+    decoded = stackbound.open(tmp_path / "two.ome.zarr")[...]
+    errors = np.abs(decoded.astype(int) - stack).max(axis=(1, 2, 3))
+
+    assert tuple(Fraction(2, 100) * span for span in spans) == tuple(map(Fraction, report.promise["stored"]))
+    assert [int(Fraction(2, 100) * span) for span in spans] == errors.tolist()
+    assert "0.02 range" in report.promise["words"]
+    assert stackbound.verify(tmp_path / "two.ome.zarr", against=tmp_path / "two.npy", axes="czyx").ok
+
+
 def test_more_than_the_whole_range_is_refused():
     """A fraction above 1 is a number in another unit, most likely."""
     with pytest.raises(UsageError, match="whole range"):
-        tolerances(Decimal(4), [Fraction(10)], floats=False)
+        shares(Decimal(4), [Fraction(10)], floats=False)
