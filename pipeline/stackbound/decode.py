@@ -433,12 +433,16 @@ def decode(payload: bytes, shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
     cut = [reader.number(length - 1) for length in whole]
     last = reader.signed() if any(cut) else 0
     kept = (whole[0] - cut[0], whole[1] - cut[1], whole[2] - cut[2])
+    limits = np.iinfo(dtype)
+    if not limits.min <= last <= limits.max:
+        raise DamagedError("the padding does not fit the pixel type")
     pixels = np.full(whole, last, dtype)
-    pixels[: kept[0], : kept[1], : kept[2]] = read_integers(reader, kept)
+    pixels[: kept[0], : kept[1], : kept[2]] = read_integers(reader, kept, limits)
     if reader.at != len(reader.data):
         raise DamagedError("bytes are left over")
     little = pixels.astype(dtype.newbyteorder("<"), copy=False).tobytes()
-    if crc32c(little, crc32c(payload[9:33])) != int.from_bytes(payload[5:9], "little"):
+    named = f"{dtype.name} {'x'.join(map(str, shape))} ".encode()
+    if crc32c(little, crc32c(named + payload[9:33])) != int.from_bytes(payload[5:9], "little"):
         raise DamagedError("the pixels are not those that the encoder saw")
     return pixels.reshape(shape)
 
@@ -449,10 +453,12 @@ def three_axes(shape: tuple[int, ...]) -> tuple[int, int, int]:
     return prod(long[:-2]), long[-2], long[-1]
 
 
-def read_integers(reader: Reader, shape: tuple[int, int, int]) -> NDArray[Any]:
+def read_integers(reader: Reader, shape: tuple[int, int, int], limits: Any) -> NDArray[Any]:
     """Return integer pixels: ``min(low + unit * value, low + width)``, in Python's numbers where 64 bits are needed."""
     low, width, tolerance = reader.signed(), reader.number(), reader.number()
     unit = 2 * tolerance + 1 if reader.number(1) else 1
+    if low < limits.min or low + width > limits.max or unit > 1 and not 0 < 2 * tolerance < width:
+        raise DamagedError("the lattice does not fit the pixel type")
     span = (width + unit // 2) // unit
     if span <= 2**24 - 1:
         value = read_lattice(reader, shape, span, min(tolerance, span) if unit == 1 else 0).astype(object)

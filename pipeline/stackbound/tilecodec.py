@@ -24,8 +24,8 @@ VERSION = 1
 HEAD = 9
 """Bytes of the version and the two checksums."""
 
-CONSTANT, CODED = 0, 1
-SAMPLES = 4
+LATTICE_BYTES = 24
+"""So many bytes after the checksums go into the beginning of the pixels' checksum: the lattice is among them."""
 
 
 class TileCoder:
@@ -98,7 +98,7 @@ class TileCoder:
             parts = tilecore.encode(tile, prediction)
             writer.data += parts.head + parts.indices + parts.residuals
             values.append(parts.values)
-        decoded = _uncropped(mapped.pixels(values, pixels.dtype), whole.shape, last)
+        decoded = _uncropped(mapped.pixels(values, pixels.dtype), whole.shape, last).reshape(pixels.shape)
         return _sealed(bytes(writer.data), decoded)
 
 
@@ -205,6 +205,10 @@ def _opened(view: memoryview) -> memoryview:
 
 
 def _pixel_checksum(pixels: NDArray[Any], body: memoryview) -> int:
-    """Return the checksum of the pixel bytes, begun from that of the lattice parameters at the body's start."""
+    """Return the checksum of the pixels' little-endian bytes, begun from one of type, shape and lattice parameters.
+
+    So a payload that decodes to the right bytes of another shape or type is refused as well.
+    """
+    named = f"{pixels.dtype.name} {'x'.join(map(str, pixels.shape))} ".encode()
     little = np.ascontiguousarray(pixels, pixels.dtype.newbyteorder("<"))
-    return crc32c(little.reshape(-1).view(np.uint8), crc32c(bytes(body[:24])))
+    return crc32c(little.reshape(-1).view(np.uint8), crc32c(named + bytes(body[:LATTICE_BYTES])))

@@ -113,16 +113,15 @@ def check(prediction: BlockPrediction, tile: LatticeTile) -> BlockPrediction:
     if steps.shape != block or steps.dtype.kind != "i" or steps.min() < 1 or steps.max() > COEFFICIENT_LIMIT:
         raise PluginError(f"steps must be whole numbers from 1 to {COEFFICIENT_LIMIT}, one per frequency")
     for side, base in zip(block, prediction.bases, strict=True):
-        if isinstance(base, str) != (base is not None and not isinstance(base, np.ndarray)) or (
-            isinstance(base, str) and base != "dct"
-        ):
-            raise PluginError(f"basis {base!r} is not known to decoders")
-        if isinstance(base, np.ndarray) and (
-            base.shape != (side, side) or base.dtype.kind != "i" or np.abs(base).max() > MATRIX_LIMIT
-        ):
-            raise PluginError(f"a basis must hold {side} by {side} whole numbers of magnitude up to {MATRIX_LIMIT}")
+        if isinstance(base, np.ndarray):
+            if base.shape != (side, side) or base.dtype.kind != "i" or np.abs(base).max() > MATRIX_LIMIT:
+                raise PluginError(
+                    f"the transform's basis must hold {side} by {side} whole numbers of magnitude up to {MATRIX_LIMIT}"
+                )
+        elif base != "dct":
+            raise PluginError(f"the transform's basis {base!r} is not known to decoders")
     if not exact(block, prediction.bases):
-        raise PluginError("the basis functions are so large that the inverse would not be exact")
+        raise PluginError("the transform's basis functions are so large that the inverse would not be exact")
     clipped = np.clip(indices.reshape(prod(block), -1)[:, :blocks], -INDEX_LIMIT, INDEX_LIMIT).astype(np.int32)
     return BlockPrediction(block, prediction.bases, steps.astype(np.int64), clipped.reshape(*block, blocks))
 
