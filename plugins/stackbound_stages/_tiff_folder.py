@@ -32,7 +32,8 @@ def list_planes(folder: Path, suffixes: tuple[str, ...]) -> tuple[list[Path], li
     """Return a folder's TIFF files in natural order, and everything else in it but the operating system's litter."""
     entries = sorted((path for path in folder.iterdir() if not is_litter(path.name)), key=natural_key)
     planes = [path for path in entries if path.name.lower().endswith(suffixes) and path.is_file()]
-    return planes, [path for path in entries if path not in set(planes)]
+    taken = set(planes)
+    return planes, [path for path in entries if path not in taken]
 
 
 def is_plane_list(source: object, suffixes: tuple[str, ...]) -> bool:
@@ -143,7 +144,7 @@ def _open_single_planes(paths: Sequence[Path], axes: str | None) -> StoredSource
                 where=name,
                 remedy="Keep only the planes of one stack in the folder, or give the files one by one.",
             )
-        offset = plane_offset(page, table.size, name)
+        offset = plane_offset(page, page.grid(), table.size, name)
         planes.append(_Plane(path, page, offset, dtype.newbyteorder(table.byteorder)))  # type: ignore[arg-type]
     layout = Layout(arrangement.axes + inner, arrangement.shape + shape)
     pixels = _PlaneFiles(planes, arrangement.shape, shape)

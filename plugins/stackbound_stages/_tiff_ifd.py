@@ -26,6 +26,8 @@ _WHOLE = {1: "u1", 3: "u2", 4: "u4", 13: "u4", 16: "u8", 18: "u8"}
 _SHARED = (256, 257, 258, 259, 266, 277, 278, 284, 317, 322, 323, 339, 32997, 32998)
 _DEFAULTS = {259: 1, 266: 1, 277: 1, 284: 1, 317: 1, 339: 1, 32997: 1}
 _OFFSETS, _COUNTS = (273, 324), (279, 325)
+_PLACES = frozenset(_OFFSETS + _COUNTS)
+_READ = frozenset((*_SHARED, 254, 262))  # and the kind of page and its photometric interpretation
 
 
 @dataclass(frozen=True)
@@ -134,6 +136,11 @@ class _Reader:
         if version not in (42, 43):
             raise SourceError("this is not a TIFF file", where=self.name, remedy="Check what the file really holds.")
         self.big = version == 43
+        self.singles = {
+            kind: struct.Struct(f"{self.order}{letter}").unpack_from
+            for kind, letter in ((3, "H"), (4, "I"), (16, "Q"))
+            if kind != 16 or self.big
+        }
         if len(head) < (16 if self.big else 8):
             raise SourceError("the file ends inside its first bytes", where=self.name, remedy=CUT)
         following = self._whole(head[8:16] if self.big else head[4:8])
@@ -171,14 +178,20 @@ class _Reader:
         if not 0 < count < 4096:
             raise SourceError(f"the page's table claims {count} fields", where=self._at(number), remedy=CUT)
         table = self._take(offset + head, count * entry + word, number)
+        singles = self.singles
         fields: dict[int, tuple[int, ...]] = {258: (1,)}
         places: dict[int, NDArray[np.int64]] = {}
         for code, kind, length, raw in struct.iter_unpack(self.order + form, table[:-word]):
-            self._check_value(code, kind, length, raw, number)
-            if code in _OFFSETS or code in _COUNTS:
+            size = length * _SIZES.get(kind, 1)
+            if size > word:
+                self._check_value(code, size, raw, number)
+            if code in _PLACES:
                 places[code] = self._values(code, kind, length, raw, number)
-            elif code in _SHARED or code in (254, 262):
-                fields[code] = tuple(int(value) for value in self._values(code, kind, length, raw, number))
+            elif code in _READ:
+                if length == 1 and kind in singles:  # nearly all fields of nearly all files
+                    fields[code] = singles[kind](raw)
+                else:
+                    fields[code] = tuple(int(value) for value in self._values(code, kind, length, raw, number))
         offsets = next((places[code] for code in _OFFSETS if code in places), None)
         counts = next((places[code] for code in _COUNTS if code in places), None)
         if 256 not in fields or 257 not in fields or offsets is None or not len(offsets):
@@ -189,10 +202,9 @@ class _Reader:
             raise SourceError("the page lists other numbers of strips and lengths", where=self._at(number), remedy=CUT)
         return Page(number, offset, fields, offsets, counts), self._whole(table[-word:])
 
-    def _check_value(self, code: int, kind: int, length: int, raw: bytes, number: int) -> None:
+    def _check_value(self, code: int, size: int, raw: bytes, number: int) -> None:
         """Refuse a field whose value lies behind the end of the file; the text on the pages often comes last."""
-        size = length * _SIZES.get(kind, 1)
-        if size > len(raw) and self._whole(raw) + size > self.size:
+        if self._whole(raw) + size > self.size:
             raise SourceError(
                 f"field {code} should end at byte {self._whole(raw) + size}, but the file has only {self.size}",
                 where=self._at(number),

@@ -15,7 +15,7 @@ from stackbound.errors import SourceError
 from stackbound.stages import Index
 
 from ._flat import FlatPixels
-from ._tiff_ifd import CUT, Page
+from ._tiff_ifd import CUT, Grid, Page
 
 CACHE = 2**26
 """Decoded bytes kept, so that regions side by side do not decode the strips between them again and again."""
@@ -23,13 +23,15 @@ CACHE = 2**26
 Box5 = tuple[tuple[int, int], ...]
 
 
-def plane_offset(page: Page, size: int, where: str) -> int | None:
+def plane_offset(page: Page, grid: Grid, size: int, where: str) -> int | None:
     """Return where a plane starts if it lies in the file as one uncompressed run; check that its data are all there.
 
     Parameters
     ----------
     page : Page
         Entry of the page table.
+    grid : Grid
+        Its strips or tiles.
     size : int
         Length of the file in bytes.
     where : str
@@ -40,11 +42,17 @@ def plane_offset(page: Page, size: int, where: str) -> int | None:
     stackbound.errors.SourceError
         A strip or tile is missing or lies outside the file.
     """
-    grid = page.grid()
     if len(page.offsets) < grid.count:
         raise SourceError(f"{len(page.offsets)} of {grid.count} strips or tiles are listed", where=where, remedy=CUT)
-    offsets, counts = page.offsets[: grid.count], page.counts[: grid.count]
     raw = page.field(259) == 1
+    # Anything else is unpacked, turned, or put together by tifffile.
+    plain = raw and page.field(266) == 1 and page.field(317) == 1 and page.fields[258][0] in (8, 16, 32, 64)
+    plain = plain and grid.gapless and page.field(262) != 6
+    if grid.count == 1:  # quickly: files of ten thousand tiny planes exist
+        offset, length = int(page.offsets[0]), grid.last if raw else int(page.counts[0])
+        if offset and length and offset + length <= size:
+            return offset if plain else None
+    offsets, counts = page.offsets[: grid.count], page.counts[: grid.count]
     lengths = grid.lengths() if raw else counts
     empty = (offsets == 0) | ((counts == 0) & (not raw))
     if empty.any() and not (page.tiled and not empty.all()):
@@ -54,9 +62,7 @@ def plane_offset(page: Page, size: int, where: str) -> int | None:
         raise SourceError(
             f"pixel data should end at byte {ends.max()}, but the file has only {size}", where=where, remedy=CUT
         )
-    # Anything else is unpacked, turned, or put together by tifffile.
-    plain = raw and page.field(266) == 1 and page.field(317) == 1 and set(page.fields[258]) in ({8}, {16}, {32}, {64})
-    if not plain or not grid.gapless or page.field(262) == 6 or empty.any():
+    if not plain or empty.any():
         return None
     return int(offsets[0]) if bool((offsets[:-1] + lengths[:-1] == offsets[1:]).all()) else None
 

@@ -113,7 +113,8 @@ def _pixels(
     pages = plane_pages(series, table, name)
     if pages is None:
         return _virtual(tiff, series, table, shape, stored, path)
-    offsets = [plane_offset(page, table.size, f"{name}, page {page.number + 1}") for page in pages]
+    grid = pages[0].grid()
+    offsets = [plane_offset(page, grid, table.size, f"{name}, page {page.number + 1}") for page in pages]
     places = [offset for offset in offsets if offset is not None]
     inner = inner_axes(shape, len(pages))
     if len(places) == len(pages):
