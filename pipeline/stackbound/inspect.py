@@ -86,7 +86,9 @@ def _store_facts(path: Path) -> dict[str, Any]:
         "bits_per_pixel": 8 * size / pixels,
         "tile": list(stored.grid.tile),
         "region": list(stored.grid.region),
-        "stages": {kind: configuration[kind]["name"] for kind in ("tile", "predict", "transform", "quantize", "encode")},
+        "stages": {
+            kind: configuration[kind]["name"] for kind in ("tile", "predict", "transform", "quantize", "encode")
+        },
         "written_by": f"stackbound {written_by}",
         "format_version": stored.attributes["format_version"],
         "plugins": [f"{stage['stage']} of {stage['distribution']} {stage['version']}" for stage in foreign],
