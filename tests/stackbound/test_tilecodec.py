@@ -42,7 +42,9 @@ def test_decoder_of_numpy_alone_agrees(pixels: NDArray[Any], tolerance: float, c
     """The plain decoder gives the pixels that the kernels give."""
     payload = coder.encode(pixels, tolerance)
 
-    assert np.array_equal(decode(payload, pixels.shape, pixels.dtype), alone.decode(payload, pixels.shape, pixels.dtype))
+    assert np.array_equal(
+        decode(payload, pixels.shape, pixels.dtype), alone.decode(payload, pixels.shape, pixels.dtype)
+    )
 
 
 def test_bound_is_reached() -> None:
@@ -130,7 +132,11 @@ def _sealed(payload: bytes) -> bytes:
 
 PAYLOADS = [
     (coder.encode(pixels, tolerance), pixels)
-    for pixels in (FIELD[:2, :20, :33], FIELD[0, :9, :9].astype(np.int64) << 40, RNG.integers(0, 2**32, (40, 3), np.uint32))
+    for pixels in (
+        FIELD[:2, :20, :33],
+        FIELD[0, :9, :9].astype(np.int64) << 40,
+        RNG.integers(0, 2**32, (40, 3), np.uint32),
+    )
     for coder in (plain_coder(block=[1, 8, 8], step=4), TileCoder(PredictNone(), Rans()))
     for tolerance in (0, 4)
 ]
@@ -185,7 +191,12 @@ def test_arbitrary_bytes_are_refused(noise: bytes) -> None:
 def test_tile_of_another_place_is_refused() -> None:
     """A payload does not decode as a tile of another shape or type."""
     payload = plain_coder().encode(FIELD, 3)
-    for shape, dtype in (((6, 90, 70), "uint16"), ((6, 70, 90), "int16"), ((3, 70, 90), "uint16"), ((6, 70, 91), "uint16")):
+    for shape, dtype in (
+        ((6, 90, 70), "uint16"),
+        ((6, 70, 90), "int16"),
+        ((3, 70, 90), "uint16"),
+        ((6, 70, 91), "uint16"),
+    ):
         with pytest.raises(TileError):
             decode(payload, shape, np.dtype(dtype))
 
@@ -241,7 +252,9 @@ class Crooked(Quantize):
 
     def weights(self, block: tuple[int, ...]) -> Any:
         """Return weights of the chosen fault."""
-        return {"zero": np.zeros(block), "nan": np.full(block, np.nan), "flat": np.ones(3)}.get(self.how, np.ones(block))
+        return {"zero": np.zeros(block), "nan": np.full(block, np.nan), "flat": np.ones(3)}.get(
+            self.how, np.ones(block)
+        )
 
     def indices(self, coefficients: Any, steps: Any, tolerance: int) -> Any:
         """Return indices of the chosen fault."""
