@@ -23,6 +23,8 @@ ZOOM = 4
 GAP, LABEL, MARGIN = 14, 50, 20
 """Screen pixels between panels, above each for its caption, and around all."""
 INK, FAINT, PAPER, FRAME = (20, 20, 20), (95, 95, 95), (255, 255, 255), (255, 196, 0)
+BELOW, ABOVE = (33, 82, 178), (190, 40, 40)
+"""Ends of the scale of differences: minus and plus the tolerance."""
 
 Colours = NDArray[np.uint8]
 
@@ -129,7 +131,7 @@ def _window(part: NDArray[Any]) -> tuple[float, float]:
 def _blue_white_red(part: NDArray[np.float64]) -> Colours:
     """Return colours for -1 (blue) over 0 (white) to 1 (red); both ends are equally dark."""
     amount = np.clip(part, -1, 1)[..., None]
-    ends = np.where(amount < 0, np.array([33.0, 82.0, 178.0]), np.array([190.0, 40.0, 40.0]))
+    ends = np.where(amount < 0, np.array(BELOW, float), np.array(ABOVE, float))
     return np.asarray(np.rint(255 + np.abs(amount) * (ends - 255)), np.uint8)
 
 

@@ -5,7 +5,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from PIL import Image
-from stackbound.picture import GAP, LABEL, MARGIN, PANEL, draw_comparison
+from stackbound.picture import ABOVE, BELOW, GAP, LABEL, MARGIN, PANEL, draw_comparison
 
 TOP = MARGIN + 40 + LABEL - 4
 
@@ -37,8 +37,8 @@ def test_the_scale_is_symmetric_and_ends_at_the_tolerance(tmp_path: Path) -> Non
     draw_comparison(tmp_path / "p.png", original, decoded, tolerance=3, title="t")
     shown = _panel(tmp_path / "p.png", 2).astype(int)
 
-    assert shown[0, 500].argmax() == 0
-    assert shown[0, 510].argmax() == 2
+    assert tuple(shown[0, 500]) == ABOVE
+    assert tuple(shown[0, 510]) == BELOW
     assert (shown[0, 505] == 255).all()
 
 
