@@ -9,6 +9,8 @@ from __future__ import annotations
 BUILTIN: tuple[str, ...] = (
     "tiff",
     "npy",
+    "zarr",
+    "array",
     "grid",
     "transform",
     "none",
@@ -22,4 +24,5 @@ BUILTIN: tuple[str, ...] = (
     "save_tiff",
     "save_ome_tiff",
     "save_npy",
+    "save_zarr",
 )
