@@ -82,7 +82,8 @@ def _dtype(array: Any, name: str) -> np.dtype[Any]:
             where=name,
             remedy="Convert them to whole numbers of 8 to 64 bits or floats of 16, 32 or 64 bits first.",
         )
-    return dtype.newbyteorder("=")
+    native: np.dtype[Any] = dtype.newbyteorder("=")
+    return native
 
 
 def _named(array: Any) -> str:

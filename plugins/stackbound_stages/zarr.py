@@ -56,11 +56,10 @@ class ZarrLoad(Load):
             if image.levels > 1:
                 notes.append(f"Only the full resolution is taken; {image.levels - 1} smaller levels are left out.")
             notes += _own_promise(node.attrs)
+            inside = not Path(image.path).is_absolute() and ".." not in Path(image.path).parts
+            if not inside or not _is_node(path / image.path):
+                raise SourceError(f"the array {image.path!r} that the metadata name is not there", where=str(path))
             path = path / image.path
-            if not _is_node(path):
-                raise SourceError(
-                    f"the array {image.path!r} that the metadata name is not there", where=str(path.parent)
-                )
             places.append(path)
             node = _open_node(path)
         return _opened(node, image, axes, places, notes)

@@ -116,11 +116,8 @@ def test_an_array_that_breaks_its_word() -> None:
                 raise self.give
             return self.give
 
-    for give, said in (
-        (np.zeros((2, 2)), "came back as"),
-        (np.zeros((4, 20, 20)), "float64"),
-        (OSError("gone"), "gone"),
-    ):
+    flat, other = np.zeros((2, 2)), np.zeros((4, 20, 20))
+    for give, said in ((flat, "came back as"), (other, "float64"), (OSError("gone"), "gone")):
         liar = Liar()
         liar.give = give
         with pytest.raises(SourceError, match=said):
