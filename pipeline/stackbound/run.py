@@ -49,7 +49,6 @@ class Plan:
     coder: TileCoder
     pipeline: Pipeline
     budget: Budget
-    estimate: float
 
     @property
     def regions(self) -> int:
@@ -132,7 +131,7 @@ def compress(
         target.check_source(file.path for file in opened.files)
         plan = _plan(opened, pipeline, scale, workers, memory, progress or Quiet())
         if dry_run:
-            return _report(plan, target, workers, memory, dry_run=True, store_bytes=_estimated_bytes(plan))
+            return _report(plan, target, workers, memory, dry_run=True, store_bytes=_estimated_bytes(plan, opened))
         with target.lock:
             target.recover()
             target.check(resume=resume, overwrite=overwrite)
@@ -179,9 +178,15 @@ def _plan(
     ranges = channel_ranges(opened, info, grid, progress) if tolerance.unit == "range" else None
     promise = resolve(tolerance, info, ranges)
     coder = TileCoder(pipeline.predict, pipeline.encode)
-    sample = sample_tiles(opened, info, grid)
-    coder = coder.planned([tile for _, tile in sample], [promise.for_tile(box.start, grid.tile) for box, _ in sample])
-    coded = sum(len(encode_tile(coder, promise, tile, box)) for box, tile in sample[:2])
+    progress.start("planning", 2)
+    try:
+        sample = sample_tiles(opened, info, grid)
+        progress.advance(1)
+        tolerances = [promise.for_tile(box.start, grid.tile) for box, _ in sample]
+        coder = coder.planned([tile for _, tile in sample], tolerances)
+        progress.advance(1)
+    finally:
+        progress.end()
     description = Description(
         version=stackbound.__version__,
         info=info,
@@ -196,7 +201,7 @@ def _plan(
             if origin.file is not None and origin.source is not None
         },
     )
-    return Plan(description, coder, pipeline, limits, coded / sum(tile.nbytes for _, tile in sample[:2]))
+    return Plan(description, coder, pipeline, limits)
 
 
 def _origin_record(stage: str, origin: Origin) -> dict[str, Any]:
@@ -333,11 +338,12 @@ def _regions(
 # ------------------------------------------------------------------------------------------------------------ report
 
 
-def _estimated_bytes(plan: Plan) -> int:
-    info = plan.description.info
-    tiles = math.prod(counts(info.shape, plan.description.grid.tile)) * math.prod(plan.description.grid.tile)
-    other = sum(map(len, side_files(plan.description).values()))
-    return int(tiles * info.dtype.itemsize * plan.estimate) + other
+def _estimated_bytes(plan: Plan, opened: OpenSource) -> int:
+    info, grid = plan.description.info, plan.description.grid
+    sample = sample_tiles(opened, info, grid)
+    coded = sum(len(encode_tile(plan.coder, plan.description.promise, tile, box)) for box, tile in sample)
+    tiles = math.prod(counts(info.shape, grid.tile))
+    return coded * tiles // len(sample) + sum(map(len, side_files(plan.description).values()))
 
 
 def _report(plan: Plan, target: Target, workers: int, memory: int, **outcome: Any) -> CompressReport:

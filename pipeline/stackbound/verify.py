@@ -83,8 +83,8 @@ def verify(
         The source cannot be read or is a stack of another shape.
     """
     path = Path(store)
-    require_store(path)
     root = _checked_root(root)
+    require_store(path)
     _check_record(record, path)
     with contextlib.ExitStack() as stack:
         source = stack.enter_context(_opened(against, axes))

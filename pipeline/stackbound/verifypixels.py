@@ -133,7 +133,8 @@ class PixelCheck:
         if record is not None:
             fault = file_fault(path, record, "file_bytes", "file_sha256")
             if fault is not None:
-                problems += self._damage(path, box, name, self._other_region(path, index) or fault)
+                other = self._other_region(path, index)
+                problems += [Problem(other, where)] if other else self._damage(path, box, name, fault)
         if self.array is None:
             if not problems:
                 problems += self._damaged_tiles(path, box, name)

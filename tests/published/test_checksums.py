@@ -5,7 +5,6 @@ import hashlib
 import google_crc32c
 import numpy as np
 import pytest
-
 from stackbound.hashes import sha256_bytes, sha256_file, sha256_pixels
 
 

@@ -4,12 +4,12 @@ import hashlib
 
 import pytest
 import rfc8785
-
 from stackbound.log import canonical, tree_root
 
 # The eight entries of the reference tree of RFC 6962 implementations (from memory; every value was recomputed from the
 # definitions of section 2.1 for this test).
-LEAVES = [bytes.fromhex(h) for h in ("", "00", "10", "2021", "3031", "40414243", "5051525354555657", "606162636465666768696a6b6c6d6e6f")]
+HEX = ["", "00", "10", "2021", "3031", "40414243", "5051525354555657", "606162636465666768696a6b6c6d6e6f"]
+LEAVES = [bytes.fromhex(text) for text in HEX]
 ROOTS = [
     "6e340b9cffb37a989ca544e6bb780a2c78901d3fb33738768511a30617afa01d",
     "fac54203e7cc696cf0dfcb42c92a1d9dbaf70ad9e621f4bd8d98662f00e3c125",
@@ -34,7 +34,7 @@ def test_empty_tree():
 
 
 def recursive(leaves):
-    """The definition of RFC 6962 section 2.1, word by word."""
+    """Return the tree hash by the definition of RFC 6962 section 2.1, word by word."""
     if len(leaves) == 1:
         return hashlib.sha256(b"\x00" + leaves[0]).digest()
     k = 1
@@ -55,7 +55,7 @@ def test_canonical_sample():
     """The sample of RFC 8785 section 3.2.2 gives its published bytes (the log itself holds no floats)."""
     sample = {
         "numbers": [333333333.33333329, 1e30, 4.50, 2e-3, 0.000000000000000000000000001],
-        "string": '\u20ac$\u000f\u000aA\'\u0042\u0022\u005c\\"\u002f',
+        "string": "\u20ac$\u000f\u000aA'\u0042\u0022\u005c\\\"\u002f",
         "literals": [None, True, False],
     }
     data = rfc8785.dumps(sample)

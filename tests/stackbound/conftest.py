@@ -6,7 +6,6 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-
 import stackbound
 
 # Small enough to be quick; several regions, several tiles each, and cut off at every end of the stack.
@@ -15,7 +14,7 @@ GRID = {"name": "grid", "tile": [2, 32, 32], "region": [4, 64, 64]}
 
 @pytest.fixture(scope="session")
 def pixels() -> np.ndarray:
-    """A noisy stack with a smooth part, a flat part and the extremes of its type."""
+    """Return a noisy stack with a smooth part, a flat part and the extremes of its type."""
     rng = np.random.default_rng(7)
     z, y, x = np.meshgrid(np.arange(6), np.arange(100), np.arange(120), indexing="ij")
     stack = 2000 + 900 * np.sin(y / 17) * np.cos(x / 23) + 40 * z + rng.normal(0, 12, z.shape)
@@ -39,7 +38,7 @@ def save_npy(tmp_path: Path) -> Callable[..., Path]:
 
 @pytest.fixture(scope="session")
 def kept(tmp_path_factory: pytest.TempPathFactory, pixels: np.ndarray) -> tuple[Path, Path, str]:
-    """A source, a store of it at tolerance 4 and its root; not to be changed."""
+    """Make a source, a store of it at tolerance 4 and its root; not to be changed."""
     folder = tmp_path_factory.mktemp("kept")
     source = folder / "source.npy"
     np.save(source, pixels)

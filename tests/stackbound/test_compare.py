@@ -7,7 +7,6 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
-
 from stackbound import compare
 
 INTEGERS = [np.dtype(name) for name in ("i1", "u1", "i2", "u2", "i4", "u4", "i8", "u8")]
@@ -45,7 +44,9 @@ def test_integers(pair, tolerance):
 def test_floats_refuse_exactly(pair, tolerance):
     """A float pixel counts as inside only where the exact difference is; a rounding never excuses it."""
     original, decoded = pair
-    exact = [abs(Fraction(float(d)) - Fraction(float(o))) for o, d in zip(original.ravel(), decoded.ravel(), strict=True)]
+    exact = [
+        abs(Fraction(float(d)) - Fraction(float(o))) for o, d in zip(original.ravel(), decoded.ravel(), strict=True)
+    ]
     inside = [d <= Fraction(tolerance) for d in exact]
 
     assert sum(not within for within in inside) == compare.over(original, decoded, tolerance)

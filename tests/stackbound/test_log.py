@@ -3,7 +3,6 @@
 import json
 
 import pytest
-
 from stackbound.errors import IntegrityError
 from stackbound.log import canonical, end_line, read_log, root_of, write_log
 

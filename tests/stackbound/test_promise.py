@@ -6,7 +6,6 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-
 from stackbound.config import Tolerance
 from stackbound.errors import IntegrityError
 from stackbound.geometry import Box

@@ -1,15 +1,16 @@
 """Whole runs."""
 
 import json
+import os
 import shutil
+import subprocess
 import zipfile
 
 import numpy as np
 import pytest
+import stackbound
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
-
-import stackbound
 from stackbound import budget
 from stackbound.errors import (
     PromiseError,
@@ -285,3 +286,24 @@ def test_a_missing_source_is_named(tmp_path):
     with pytest.raises(SourceError):
         compress(tmp_path / "none.npy", tmp_path / "s")
     assert [] == list(tmp_path.iterdir())
+
+
+OTHERS = [path for path in os.environ.get("STACKBOUND_OTHER_PYTHONS", "").split(os.pathsep) if path]
+
+
+@pytest.mark.skipif(not OTHERS, reason="STACKBOUND_OTHER_PYTHONS names no other interpreter that has stackbound")
+@pytest.mark.parametrize("python", OTHERS)
+def test_same_bytes_on_other_interpreters(kept, tmp_path, python):
+    """Another version of Python, numpy, numba and zarr makes the same bytes, and verifies those made here."""
+    source, store, _ = kept
+    script = (
+        "import sys, json, stackbound\n"
+        "source, target, store, config = sys.argv[1:]\n"
+        "stackbound.compress(source, target, tolerance=4, config=json.loads(config), workers=2)\n"
+        "assert stackbound.verify(store, against=source).ok\n"
+    )
+    command = [python, "-c", script, str(source), str(tmp_path / "s"), str(store), json.dumps({"tile": GRID})]
+    done = subprocess.run(command, capture_output=True, text=True, check=False)
+
+    assert 0 == done.returncode, done.stderr
+    assert contents(store) == contents(tmp_path / "s")

@@ -3,14 +3,13 @@
 import numpy as np
 import pytest
 import zarr
-from zarr.codecs import BytesCodec, ShardingCodec
-
 from stackbound.errors import IntegrityError
 from stackbound.shard import read_shard, shard_parts
+from zarr.codecs import BytesCodec, ShardingCodec
 
 
 def test_zarr_reads_our_shard(tmp_path):
-    """zarr's own sharding codec reads what we write, tile by tile."""
+    """Zarr's own sharding codec reads what we write, tile by tile."""
     pixels = np.arange(8 * 12, dtype="<u2").reshape(8, 12)
     sharding = ShardingCodec(chunk_shape=(4, 4), codecs=[BytesCodec(endian="little")])
     array = zarr.create_array(

@@ -7,7 +7,6 @@ import sys
 import time
 
 import pytest
-
 from stackbound.errors import TargetError
 from stackbound.lock import Lock
 from stackbound.target import Target

@@ -7,7 +7,6 @@ import sys
 import numpy as np
 import pytest
 import zarr
-
 from stackbound.errors import PromiseError, TileError, UsageError
 from stackbound.zarrcodec import NAME, TileCodec
 
@@ -30,7 +29,12 @@ def test_plain_zarr_writes_under_the_same_promise(codec, tmp_path, shards):
     rng = np.random.default_rng(2)
     other = rng.integers(0, 4000, (8, 64, 64), dtype=np.uint16)
     array = zarr.create_array(
-        tmp_path / "a", shape=other.shape, dtype=other.dtype, chunks=(2, 32, 32), shards=shards, serializer=codec,
+        tmp_path / "a",
+        shape=other.shape,
+        dtype=other.dtype,
+        chunks=(2, 32, 32),
+        shards=shards,
+        serializer=codec,
         compressors=None,
     )
     array[...] = other
@@ -40,7 +44,7 @@ def test_plain_zarr_writes_under_the_same_promise(codec, tmp_path, shards):
 
 
 def test_the_configuration_round_trips(codec, kept, tmp_path):
-    """zarr writes the codec's configuration as it read it."""
+    """Zarr writes the codec's configuration as it read it."""
     zarr.create_array(tmp_path / "a", shape=(8, 8), dtype="u2", chunks=(8, 8), serializer=codec, compressors=None)
     written = json.loads((tmp_path / "a" / "zarr.json").read_bytes())["codecs"]
 
@@ -65,7 +69,12 @@ def test_pixel_types_are_guarded(codec, tmp_path, shards, dtype):
     """A type that the codec does not hold is refused, inside shards too."""
     with pytest.raises(UsageError, match="integers and floats"):
         array = zarr.create_array(
-            tmp_path / "a", shape=(16, 16), dtype=dtype, chunks=(8, 8), shards=shards, serializer=codec,
+            tmp_path / "a",
+            shape=(16, 16),
+            dtype=dtype,
+            chunks=(8, 8),
+            shards=shards,
+            serializer=codec,
             compressors=None,
         )
         array[...] = np.ones((16, 16), dtype)
@@ -81,7 +90,11 @@ def test_a_newer_format_is_refused(codec):
 def test_damage_is_named(kept, tmp_path):
     """Bytes that are no tile raise a tile error through zarr, not wrong pixels and not another library's error."""
     array = zarr.create_array(
-        tmp_path / "a", shape=(32, 32), dtype="u2", chunks=(32, 32), serializer=configuration_of(kept[1]),
+        tmp_path / "a",
+        shape=(32, 32),
+        dtype="u2",
+        chunks=(32, 32),
+        serializer=configuration_of(kept[1]),
         compressors=None,
     )
     array[...] = np.arange(1024, dtype="u2").reshape(32, 32)
@@ -104,12 +117,15 @@ def test_an_independent_reader(kept, pixels):
         "assert 'stackbound.run' not in sys.modules\n"
     )
     done = subprocess.run(
-        [sys.executable, "-W", "error", "-c", script, str(store), str(source)], capture_output=True, text=True, check=False
+        [sys.executable, "-W", "error", "-c", script, str(store), str(source)],
+        capture_output=True,
+        text=True,
+        check=False,
     )
 
     assert ("4", "") == (done.stdout.strip(), done.stderr.strip())
 
 
 def test_the_name_is_registered():
-    """zarr finds the codec by its name alone."""
+    """Zarr finds the codec by its name alone."""
     assert zarr.registry.get_codec_class(NAME) is TileCodec
