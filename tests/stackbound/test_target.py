@@ -23,7 +23,7 @@ with Lock(Path(sys.argv[1])):
 
 @pytest.fixture
 def holder(tmp_path):
-    """A process that holds the lock of `tmp_path`."""
+    """Start a process that holds the lock of `tmp_path`."""
     process = subprocess.Popen([sys.executable, "-c", HOLD, str(tmp_path / "lock")], stdout=subprocess.PIPE, text=True)
     assert process.stdout is not None
     assert process.stdout.readline() == "held\n"
@@ -117,7 +117,7 @@ def test_finish_replaces_whole_stores(tmp_path):
     target.finish()
 
     assert "new" == (target.path / "stackbound" / "note").read_text(encoding="utf-8")
-    assert ["t"] == os.listdir(tmp_path)
+    assert ["t"] == [path.name for path in tmp_path.iterdir()]
 
 
 def test_a_kill_between_two_renames_loses_nothing(tmp_path):

@@ -17,7 +17,7 @@ from .conftest import contents, records
 
 @pytest.fixture
 def store(kept, tmp_path):
-    """A copy of the store that may be changed."""
+    """Make a copy of the store that may be changed."""
     shutil.copytree(kept[1], tmp_path / "s")
     return tmp_path / "s"
 

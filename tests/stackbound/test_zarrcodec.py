@@ -19,7 +19,7 @@ def configuration_of(store):
 
 @pytest.fixture
 def codec(kept):
-    """The codec's entry of a store at tolerance 4."""
+    """Return the codec's entry of a store at tolerance 4."""
     return configuration_of(kept[1])
 
 
