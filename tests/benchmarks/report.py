@@ -138,10 +138,11 @@ def plot(path: Path, rows: Sequence[Measurement]) -> None:
         -(-len(names) // columns), columns, figsize=(3.6 * columns, 2.9 * -(-len(names) // columns)), squeeze=False
     )
     for panel, name in zip(panels.flat, names, strict=False):
-        for coder, marker in zip(coders, "osv^D<>*" * len(coders), strict=False):
+        for number, coder in enumerate(coders):
             points = [(r.multiple, r.bits) for r in rows if r.stack == name and r.coder == coder]
             if points:
-                panel.plot(*zip(*points, strict=True), marker=marker, label=coder)
+                look = {"marker": "osv^D<>*"[number % 8], "color": f"C{number}"}
+                panel.plot(*zip(*points, strict=True), label=coder, **look)
         floors = sorted({(r.multiple, r.floor) for r in rows if r.stack == name and r.floor is not None})
         if floors:
             panel.plot(*zip(*floors, strict=True), "k:", label="entropy of the known noise")
@@ -157,6 +158,6 @@ def plot(path: Path, rows: Sequence[Measurement]) -> None:
         for handle, label in zip(*panel.get_legend_handles_labels(), strict=True):
             labelled.setdefault(label, handle)
     figure.legend(labelled.values(), labelled.keys(), loc="upper center", ncols=len(labelled), frameon=False)
-    figure.tight_layout(rect=(0, 0, 1, 0.95))
+    figure.tight_layout(rect=(0.01, 0, 1, 0.96))
     figure.savefig(path, dpi=110)
     plt.close(figure)

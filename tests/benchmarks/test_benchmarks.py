@@ -162,6 +162,40 @@ def test_the_command_measures_a_folder(tmp_path: Path, capsys: pytest.CaptureFix
     assert (tmp_path / "out" / "benchmark.png").stat().st_size > 10_000
 
 
+PLUGIN = """
+import numpy as np
+from stackbound import hookimpl
+from stackbound.stages import Options, Quantize
+
+class CoarseOptions(Options):
+    pass
+
+class Coarse(Quantize):
+    name = "coarse"
+    Options = CoarseOptions
+    def indices(self, coefficients, steps, tolerance):
+        return np.rint(coefficients / steps / 8).astype(np.int32) * 8
+
+@hookimpl
+def stackbound_stages():
+    return [Coarse]
+"""
+
+
+def test_a_stage_of_anyone_is_measured_beside_the_built_in(tmp_path: Path, fresh_registry: None) -> None:
+    """A quantizer from a file is measured by its name, keeps the tolerance, and costs what it costs."""
+    (tmp_path / "coarse.py").write_text(PLUGIN, encoding="utf-8")
+    write_ome_tiff(tmp_path / "one.ome.tif", light_sheet((2, 96, 96)))
+    words = ["--only", "one.ome.tif", "--repeat", "1", "--tolerances", "1", "--plugin", str(tmp_path / "coarse.py")]
+    stages = ["--stage", "predict=transform,quantize=coarse", "--stage", "predict=transform,quantize=uniform"]
+    assert run.main([str(tmp_path), *words, *stages, "--out", str(tmp_path / "out")]) == 0
+    content = json.loads((tmp_path / "out" / "benchmark.json").read_text(encoding="utf-8"))
+    rows = {row["coder"]: row for row in content["measurements"]}
+
+    assert rows["predict=transform,quantize=coarse"]["largest_error"] <= rows["stackbound"]["tolerance"]
+    assert rows["predict=transform,quantize=coarse"]["bits"] > rows["predict=transform,quantize=uniform"]["bits"]
+
+
 def test_sources_are_found_in_natural_order(tmp_path: Path) -> None:
     """Stack 2 comes before stack 10, and other files are left out."""
     for name in ("s10", "s2"):
