@@ -66,7 +66,7 @@ def predicted(
     scale = unit(block, tile.span)
     weights = np.asarray(quantize.weights(block), np.float64)
     if weights.shape != block or not np.isfinite(weights).all() or weights.min() <= 0:
-        raise PluginError("weights must be positive numbers, one per frequency", where=f"quantize {quantize.name}")
+        raise PluginError("weights must be positive numbers, one per frequency", where=quantize.title)
     steps = np.clip(np.rint(step * scale * weights), 1, COEFFICIENT_LIMIT).astype(np.int64)
     indices = quantize.indices(values, steps / scale, tile.tolerance)
     _require(quantize, indices, values.shape, np.dtype(np.int32))
@@ -76,7 +76,7 @@ def predicted(
 
 def _require(stage: Transform | Quantize, result: object, shape: tuple[int, ...], dtype: np.dtype[np.generic]) -> None:
     """Refuse what a stage returned when its shape or type is wrong or a number is not finite."""
-    where = f"{stage.kind} {stage.name}"
+    where = stage.title
     if not isinstance(result, np.ndarray):
         raise PluginError(f"it returned {type(result).__name__}, not an array", where=where)
     if result.shape != shape or result.dtype != dtype:

@@ -6,6 +6,7 @@ check failed; 130 interrupted. Scientific modules are imported inside the comman
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
 import shlex
@@ -107,10 +108,10 @@ def compress(words: tuple[str, ...], *, as_json: bool, **options: Any) -> int:
     options["command"] = _command_line()
     jobs, many = _batch.plan(sources, Path(store), overwrite=options["overwrite"], resume=options["resume"])
     if many:
-        outcome = _batch.compress_all(jobs, options, ConsoleProgress())
+        outcome: _batch.Outcome = _work(_batch.compress_all, jobs, options, ConsoleProgress())
         _print(outcome.to_json, outcome.text, as_json)
         return outcome.exit_code
-    report = _batch.compress_one(jobs[0], options, ConsoleProgress())
+    report = _work(_batch.compress_one, jobs[0], options, ConsoleProgress())
     _print(report.to_json, lambda: _text().compress(report), as_json)
     return 0
 
@@ -131,7 +132,8 @@ def verify(store: str, *, as_json: bool, against: str | None, root: str | None, 
 
     announce_compilation()
     source = _one_source(against) if against is not None else None
-    report = stackbound.verify(store, against=source, root=root, record=record, progress=ConsoleProgress())
+    options = {"against": source, "root": root, "record": record, "progress": ConsoleProgress()}
+    report = _work(stackbound.verify, store, **options)
     _print(report.to_json, lambda: _text().verify(report), as_json)
     return 0 if report.ok else 3
 
@@ -149,7 +151,7 @@ def restore(store: str, target: str, *, as_json: bool) -> int:
     import stackbound
 
     announce_compilation()
-    report = stackbound.restore(store, target, progress=ConsoleProgress())
+    report = _work(stackbound.restore, store, target, progress=ConsoleProgress())
     _print(report.to_json, lambda: f"{_text().restore(report)}\n{CAUTION}", as_json)
     return 0
 
@@ -161,7 +163,7 @@ def inspect(path: str, *, as_json: bool) -> int:
     """Tell what PATH is, a source or a store: axes, shape, pixel type, promise, sizes, versions."""
     from .inspect import inspect as look
 
-    facts = look(_one_source(path))
+    facts = _work(look, _one_source(path))
     _print(lambda: facts, lambda: _text().inspect(facts), as_json)
     return 0
 
@@ -197,9 +199,15 @@ def demo(folder: str) -> int:
     from .demo import demo as run_demo
 
     announce_compilation()
-    report = run_demo(Path(folder), progress=ConsoleProgress())
+    report = _work(run_demo, Path(folder), progress=ConsoleProgress())
     click.echo("\n".join(report.lines()))
     return 0
+
+
+def _work(function: Callable[..., Any], *args: Any, **options: Any) -> Any:
+    """Call `function`; what plugins print meanwhile goes to standard error, which leaves results alone on output."""
+    with contextlib.redirect_stdout(sys.stderr):
+        return function(*args, **options)
 
 
 def _text() -> Any:

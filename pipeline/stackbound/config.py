@@ -16,6 +16,7 @@ from pydantic import ValidationError
 
 from . import _configmodel as model
 from .errors import ConfigError, PluginError, StackboundError, UsageError
+from .guard import guarded
 from .plugins import Origin, Registry, registry
 from .recipes import read_document
 from .stages import Options, Stage
@@ -211,7 +212,7 @@ class Pipeline:
 
 
 def build(config: PipelineConfig, source: Registry | None = None) -> Pipeline:
-    """Return the stages of a configuration.
+    """Return the stages of a configuration; those of plugins behind a guard (`stackbound.guard`).
 
     Raises
     ------
@@ -225,12 +226,12 @@ def build(config: PipelineConfig, source: Registry | None = None) -> Pipeline:
         cls = source.get(kind, choice.name)
         origins[f"{kind}:{choice.name}"] = origin = source.origin(cls)
         try:
-            return cls(choice.options, **parts)
+            return (cls if origin.builtin else guarded(cls, origin))(choice.options, **parts)
         except StackboundError as error:
             raise error.at(f"{kind} stage '{choice.name}'") from error.__cause__
-        except Exception as error:
+        except (Exception, SystemExit) as error:
             what = f"The {kind} stage '{choice.name}' ({origin}) raised {type(error).__name__}: {error}."
-            raise PluginError(what, remedy="Tell the author of the plugin.") from error
+            raise PluginError(what, remedy="Tell the plugin's author.") from error
 
     tile = make("tile", config.tile)
     transform = make("transform", config.transform)

@@ -37,6 +37,10 @@ class Options(BaseModel):
     )
 
 
+AnyOptions = Options
+"""The same under a name that a stage's own `Options` does not hide."""
+
+
 class Stage(ABC):
     """One exchangeable part of the pipeline.
 
@@ -50,8 +54,13 @@ class Stage(ABC):
     name: ClassVar[str]
     Options: ClassVar[type[Options]] = Options
 
-    def __init__(self, options: Options | None = None) -> None:
+    def __init__(self, options: AnyOptions | None = None) -> None:
         self.options = self.Options() if options is None else options
+
+    @property
+    def title(self) -> str:
+        """What messages call this stage."""
+        return f"{self.kind} stage '{self.name}'"
 
 
 # ------------------------------------------------------------------------------------------------------------ load
@@ -208,7 +217,7 @@ class Tile(Stage):
 
 
 class Transform(Stage):
-    """Blocks of pixels to coefficients; the way back is an integer matrix per axis that every decoder knows to apply."""
+    """Blocks of pixels to coefficients; the way back is an integer matrix per axis that every decoder applies."""
 
     kind = "transform"
 
@@ -374,6 +383,11 @@ class Encode(Stage):
     @abstractmethod
     def coder(self) -> str:
         """Name of the lossless coder: "rans" (interleaved range coding in spread classes) or "zstd"."""
+
+    @property
+    def effort(self) -> int:
+        """How hard the coder tries, where it has levels."""
+        return 0
 
 
 # ---------------------------------------------------------------------------------------------------------- verify
