@@ -50,7 +50,10 @@ def sample(tile: LatticeTile) -> LatticeTile:
         sides[2] = min(shape[2], SAMPLE_DEPTH * SAMPLE_SIDE * SAMPLE_SIDE)
     start = [(length - side) // 2 for length, side in zip(shape, sides, strict=True)]
     cut = tuple(slice(first, first + side) for first, side in zip(start, sides, strict=True))
-    return LatticeTile(np.ascontiguousarray(tile.values[cut]), tile.span, tile.tolerance)
+    each = tile.tolerances
+    if each is not None:
+        each = each[tuple(part if own > 1 else slice(None) for own, part in zip(each.shape, cut, strict=True))]
+    return LatticeTile(np.ascontiguousarray(tile.values[cut]), tile.span, tile.tolerance, each)
 
 
 def search(

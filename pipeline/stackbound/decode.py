@@ -20,6 +20,8 @@ from numpy.typing import NDArray
 
 VERSION = 1
 LENGTHS = (1, 2, 4, 8, 16, 32)
+WIDEST = 2**24 - 1
+Shape = tuple[int, int, int]
 
 
 class DamagedError(ValueError):
@@ -377,9 +379,9 @@ def cosine(length: int) -> NDArray[np.float64]:
     return np.rint(np.array(rows) * 2**14)
 
 
-def read_prediction(reader: Reader, shape: tuple[int, int, int], span: int) -> NDArray[np.int64]:
+def read_prediction(reader: Reader, shape: Shape, span: int, plain: bool) -> NDArray[np.int64]:
     """Return the integer prediction of a tile: indices times steps through an integer basis, exact in float64."""
-    block = tuple(LENGTHS[reader.number(5)] for _ in range(3))
+    block = (LENGTHS[reader.number(5)], LENGTHS[reader.number(5)], LENGTHS[reader.number(5)])
     if block[0] > 16 or any(side >= 2 * length for side, length in zip(block, shape)):
         raise DamagedError("a block does not fit the tile")
     bases = []
@@ -390,10 +392,13 @@ def read_prediction(reader: Reader, shape: tuple[int, int, int], span: int) -> N
             bases.append(np.array([reader.signed() for _ in range(side * side)], np.float64).reshape(side, side))
     count = prod(block) if reader.number(1) else 1
     steps = np.array([reader.number(2**26) for _ in range(count)], np.float64)
-    grid = tuple(-(-length // side) for length, side in zip(shape, block))
-    indices = read_indices(reader, block, grid).astype(np.float64)
+    grid = (-(-shape[0] // block[0]), -(-shape[1] // block[1]), -(-shape[2] // block[2]))
+    if plain:
+        indices = np.clip(read_zstd(reader, prod(block) * prod(grid)), -(2**28), 2**28).reshape(*block, *grid)
+    else:
+        indices = read_indices(reader, block, grid)
     factors = np.broadcast_to(steps, prod(block)).reshape(*block, 1, 1, 1)
-    data = np.clip(indices * factors, -(2.0**26), 2.0**26)
+    data = np.clip(indices.astype(np.float64) * factors, -(2.0**26), 2.0**26)
     for axis in range(3):
         if block[axis] > 1:
             data = np.rint(np.moveaxis(np.tensordot(bases[axis], data, ([0], [axis])), 0, axis) * 2.0**-14)
@@ -403,13 +408,36 @@ def read_prediction(reader: Reader, shape: tuple[int, int, int], span: int) -> N
     return placed[: shape[0], : shape[1], : shape[2]].astype(np.int64)
 
 
-def read_lattice(reader: Reader, shape: tuple[int, int, int], span: int, tolerance: int) -> NDArray[np.int64]:
-    """Return the lattice values of one array."""
+def read_array(reader: Reader, shape: Shape, span: int, tolerance: Any) -> NDArray[np.int64]:
+    """Return the lattice values of one array: prediction and residual, clipped to the span."""
+    plain = reader.number(1) == 1
     if reader.number(1):
-        predicted = read_prediction(reader, shape, span)
+        predicted = read_prediction(reader, shape, span, plain)
     else:
         predicted = np.full(shape, (span + 1) // 2, np.int64)
-    return np.clip(predicted + (2 * tolerance + 1) * read_residuals(reader, shape), 0, span)
+    residuals = read_zstd(reader, prod(shape)).reshape(shape) if plain else read_residuals(reader, shape)
+    return np.clip(predicted + (2 * tolerance + 1) * residuals, 0, span)
+
+
+def read_zstd(reader: Reader, count: int) -> NDArray[np.int64]:
+    """Return whole numbers stored by the `zstd` stage: width, then zstd (RFC 8878) of all first bytes, and so on.
+
+    Needs ``compression.zstd`` (Python 3.14) or the package `zstandard`; the other coder needs nothing.
+    """
+    width = (1, 2, 4)[reader.number(2)]
+    data = reader.sized()
+    try:
+        from compression import zstd
+
+        raw = zstd.ZstdDecompressor().decompress(data, count * width + 1)
+    except ImportError:
+        import zstandard
+
+        raw = zstandard.ZstdDecompressor().stream_reader(data).read(count * width + 1)
+    if len(raw) != count * width:
+        raise DamagedError("a compressed array has the wrong size")
+    shuffled = np.frombuffer(raw, np.uint8).reshape(width, count).T
+    return np.ascontiguousarray(shuffled).view(f"<i{width}").reshape(-1).astype(np.int64)
 
 
 # --------------------------------------------------------------------------------------------------------------- tile
@@ -429,46 +457,104 @@ def decode(payload: bytes, shape: tuple[int, ...], dtype: Any) -> NDArray[Any]:
     if crc32c(payload[5:]) != int.from_bytes(payload[1:5], "little"):
         raise DamagedError("the checksum of the bytes does not match")
     reader = Reader(payload[9:])
-    whole = three_axes(shape)
+    little = dtype.newbyteorder("<")
+    long = [1, 1, 1] + [length for length in shape if length != 1]
+    whole = (prod(long[:-2]), long[-2], long[-1])
     cut = [reader.number(length - 1) for length in whole]
-    last = reader.signed() if any(cut) else 0
+    last = np.frombuffer(reader.take(dtype.itemsize), little) if any(cut) else np.zeros(1, little)
     kept = (whole[0] - cut[0], whole[1] - cut[1], whole[2] - cut[2])
-    limits = np.iinfo(dtype)
-    if not limits.min <= last <= limits.max:
-        raise DamagedError("the padding does not fit the pixel type")
-    pixels = np.full(whole, last, dtype)
-    pixels[: kept[0], : kept[1], : kept[2]] = read_integers(reader, kept, limits)
+    inside = read_floats(reader, kept, dtype) if dtype.kind == "f" else read_integers(reader, kept, dtype)
+    read_exceptions(reader, inside)
     if reader.at != len(reader.data):
         raise DamagedError("bytes are left over")
-    little = pixels.astype(dtype.newbyteorder("<"), copy=False).tobytes()
+    pixels = np.full(whole, last.astype(dtype), dtype)
+    pixels[: kept[0], : kept[1], : kept[2]] = inside
     named = f"{dtype.name} {'x'.join(map(str, shape))} ".encode()
-    if crc32c(little, crc32c(named + payload[9:33])) != int.from_bytes(payload[5:9], "little"):
+    found = crc32c(pixels.astype(little, copy=False).tobytes(), crc32c(named + payload[9:33]))
+    if found != int.from_bytes(payload[5:9], "little"):
         raise DamagedError("the pixels are not those that the encoder saw")
     return pixels.reshape(shape)
 
 
-def three_axes(shape: tuple[int, ...]) -> tuple[int, int, int]:
-    """Return the shape without axes of length 1, leading ones merged or filled up with 1."""
-    long = [1, 1, 1] + [length for length in shape if length != 1]
-    return prod(long[:-2]), long[-2], long[-1]
-
-
-def read_integers(reader: Reader, shape: tuple[int, int, int], limits: Any) -> NDArray[Any]:
+def read_integers(reader: Reader, shape: Shape, dtype: np.dtype[Any]) -> NDArray[Any]:
     """Return integer pixels: ``min(low + unit * value, low + width)``, in Python's numbers where 64 bits are needed."""
     low, width, tolerance = reader.signed(), reader.number(), reader.number()
     unit = 2 * tolerance + 1 if reader.number(1) else 1
-    if low < limits.min or low + width > limits.max or unit > 1 and not 0 < 2 * tolerance < width:
+    each = read_tolerances(reader, shape)
+    limits = np.iinfo(dtype)
+    if low < limits.min or low + width > limits.max or (unit > 1 and not 0 < 2 * tolerance < width):
         raise DamagedError("the lattice does not fit the pixel type")
     span = (width + unit // 2) // unit
-    if span <= 2**24 - 1:
-        value = read_lattice(reader, shape, span, min(tolerance, span) if unit == 1 else 0).astype(object)
-    else:
-        value = np.zeros(shape, object)
-        count = -(-span.bit_length() // 16)
-        for place in range(count):
-            part = span >> 16 * (count - 1) if place == 0 else 2**16 - 1
-            value = value * 2**16 + read_lattice(reader, shape, part, 0)
-    return low + np.minimum(value * unit, width)
+    if unit == 1 and span <= WIDEST:
+        value = read_array(reader, shape, span, min(tolerance, span) if each is None else each)
+        return (value.astype(object) + low).astype(dtype) if dtype.itemsize == 8 else (value + low).astype(dtype)
+    return (low + np.minimum(read_pieces(reader, shape, span) * unit, width)).astype(dtype)
+
+
+def read_pieces(reader: Reader, shape: Shape, span: int) -> NDArray[Any]:
+    """Return whole numbers up to `span` that are coded without loss, in pieces of 16 bits where 24 do not hold them."""
+    if span <= WIDEST:
+        return read_array(reader, shape, span, 0).astype(object)
+    value = np.zeros(shape, object)
+    count = -(-span.bit_length() // 16)
+    for place in range(count):
+        part = span >> 16 * (count - 1) if place == 0 else 2**16 - 1
+        value = value * 2**16 + read_array(reader, shape, part, 0)
+    return value
+
+
+def read_floats(reader: Reader, shape: Shape, dtype: np.dtype[Any]) -> NDArray[Any]:
+    """Return floating-point pixels: from their bits in order, or ``low + step * value`` in float64, then rounded."""
+    if reader.number(1) == 0:
+        reader.take(8)
+        low, width = reader.number(), reader.number()
+        bits = 8 * dtype.itemsize
+        if low + width >= 2**bits:
+            raise DamagedError("the bits do not fit the pixel type")
+        order = np.minimum(read_pieces(reader, shape, width), width) + low
+        top = 2 ** (bits - 1)
+        return np.where(order >= top, order - top, 2**bits - 1 - order).astype(f"u{dtype.itemsize}").view(dtype)
+    _, start, step = np.frombuffer(reader.take(24), "<f8").astype(np.float64)
+    span, fineness = reader.number(WIDEST), reader.number(WIDEST)
+    if not (np.isfinite(start) and step >= 0 and np.isfinite(step)):
+        raise DamagedError("an impossible lattice")
+    each = read_tolerances(reader, shape)
+    value = read_array(reader, shape, span, min(fineness, span) if each is None else each)
+    with np.errstate(over="ignore"):
+        return np.asarray(start + step * value.astype(np.float64)).astype(dtype)
+
+
+def read_tolerances(reader: Reader, shape: Shape) -> NDArray[np.int64] | None:
+    """Return whole tolerances where they differ from pixel to pixel, along the axes that the first number names."""
+    along = reader.number(8)
+    if along == 0:
+        return None
+    lengths = [length if along >> axis & 1 else 1 for axis, length in enumerate(shape)]
+    count = reader.number(prod(lengths))
+    values = np.cumsum(golomb(reader.sized(), count))
+    if count != prod(lengths) or values.min() < 0:
+        raise DamagedError("the tolerances make no sense")
+    return np.asarray(values.reshape(lengths), np.int64)
+
+
+def read_exceptions(reader: Reader, pixels: NDArray[Any]) -> None:
+    """Put the pixels that are kept bit for bit in place: runs by distance from the run before, length less 1, bits."""
+    count = reader.number(pixels.size)
+    if count == 0:
+        return
+    pairs = reader.number(2 * count)
+    numbers = golomb(reader.sized(), pairs)
+    size = pixels.dtype.itemsize
+    bits = np.frombuffer(reader.take(count * size), f"<u{size}")
+    flat = pixels.reshape(-1).view(f"u{size}")
+    at = 0
+    if pairs != 2 * count:
+        raise DamagedError("exceptions are missing")
+    for gap, more, value in zip(numbers[0::2], numbers[1::2], bits):
+        if gap < 0 or more < 0 or at + gap + more >= flat.size:
+            raise DamagedError("exceptions lie outside the tile")
+        flat[at + gap : at + gap + more + 1] = value
+        at += gap + more + 1
 
 
 # ----------------------------------------------------------------------------------------------------------- checksum

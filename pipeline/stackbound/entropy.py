@@ -42,7 +42,7 @@ def encode_residuals(residuals: NDArray[np.int32]) -> bytes:
     group, frequencies = _write_tables(writer, histogram)
     _write_words(writer, rans.encode_runs, symbols, _grouped(run_tables, group), nx, frequencies)
     writer.sized(low_bits.tobytes())
-    _write_numbers(writer, far)
+    write_numbers(writer, far)
     return bytes(writer.data)
 
 
@@ -62,7 +62,7 @@ def decode_residuals(reader: Reader, shape: tuple[int, int, int]) -> NDArray[np.
     if used != words.size - rans.STATES or np.any(states != rans.LOW):
         raise damaged("the range coder does not end where it should")
     low_bits = np.frombuffer(reader.sized(), np.uint8)
-    far = _read_numbers(reader, nz * ny * nx)
+    far = read_numbers(reader, nz * ny * nx)
     residuals = out.reshape(shape)
     if (
         low_bits.size or far.size or classes.max(initial=0) > spread.DIRECT or out.min(initial=0) == -128
@@ -107,7 +107,7 @@ def encode_indices(indices: NDArray[np.int32], block: tuple[int, int, int], grid
     group, frequencies = _write_tables(writer, histogram)
     _write_words(writer, rans.encode, symbols, _grouped(tabs, group), rans.STATES, frequencies)
     writer.sized(low_bits[: -(-bits // 8)].tobytes())
-    _write_numbers(writer, listed[:far])
+    write_numbers(writer, listed[:far])
     return bytes(writer.data)
 
 
@@ -121,7 +121,7 @@ def decode_indices(reader: Reader, block: tuple[int, int, int], grid: tuple[int,
     group, slots = _read_tables(reader)
     words, states = _read_words(reader)
     low_bits = np.frombuffer(reader.sized(), np.uint8)
-    listed = _read_numbers(reader, len(order.order) * blocks)
+    listed = read_numbers(reader, len(order.order) * blocks)
     indices = np.empty((len(order.order), blocks), np.int32)
     wrong = coefficients.join_indices(
         order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes), grid[1], grid[2],
@@ -223,13 +223,15 @@ def _read_words(reader: Reader, states: int = rans.STATES) -> tuple[NDArray[np.u
     return np.concatenate([np.frombuffer(data, "<u2").astype(np.uint16), SPARE]), initial
 
 
-def _write_numbers(writer: Writer, numbers: NDArray[np.int64]) -> None:
+def write_numbers(writer: Writer, numbers: NDArray[np.int64]) -> None:
+    """Write signed numbers after their count."""
     writer.number(len(numbers))
     if len(numbers):
         _write_bits(writer, numbers)
 
 
-def _read_numbers(reader: Reader, most: int) -> NDArray[np.int64]:
+def read_numbers(reader: Reader, most: int) -> NDArray[np.int64]:
+    """Read at most so many signed numbers."""
     count = reader.number(most)
     return _read_bits(reader, count) if count else np.zeros(0, np.int64)
 

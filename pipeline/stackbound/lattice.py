@@ -1,15 +1,13 @@
-"""From pixels and a tolerance to whole numbers on a lattice, and back.
+"""What every lattice of a tile shares: the tile in three axes, its tolerance, and the arrays that are coded.
 
-Integer pixels of a tile are counted from the tile's smallest value, so narrow data of a wide type costs no more than
-narrow data of a narrow one. Where the tile's range is too wide for the transform, values are first rounded to multiples
-of ``2 E + 1``, which uses up the tolerance E, and what is still too wide is cut into halves of 16 bits, each an array of
-its own, coded without loss.
+`stackbound.integerlattice` and `stackbound.floatlattice` hold the two kinds of lattice.
 """
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from dataclasses import dataclass
-from math import isnan
+from math import prod
 from typing import Any
 
 import numpy as np
@@ -17,7 +15,6 @@ from numpy.typing import NDArray
 
 from stackbound.byteio import Reader, Writer, damaged
 from stackbound.errors import UsageError
-from stackbound.kernels import pixels as kernels
 
 Tolerance = int | float | NDArray[Any]
 """A tolerance in stored pixel values: one number, or an array that broadcasts over the tile."""
@@ -26,11 +23,12 @@ SPAN_LIMIT = 2**24 - 1
 """Largest lattice span that prediction and residual handle exactly (`stackbound.kernels.basis`)."""
 
 PART_BITS = 16
+"""What spans further is cut into pieces of so many bits."""
 
 
 @dataclass(frozen=True)
 class LatticeTile:
-    """One tile on its integer lattice.
+    """One array of lattice values.
 
     Attributes
     ----------
@@ -39,157 +37,166 @@ class LatticeTile:
     span : int
         The largest lattice value, below 2**24.
     tolerance : int
-        Largest error allowed, in lattice steps, at most `span`.
+        Largest error allowed, in lattice steps, at most `span`; the smallest where it differs from pixel to pixel.
+    tolerances : ndarray of int32 or None
+        Where it differs: one per pixel, of a shape that broadcasts to that of `values`.
     """
 
     values: NDArray[np.int32]
     span: int
     tolerance: int
+    tolerances: NDArray[np.int32] | None = None
 
 
 @dataclass(frozen=True)
-class IntegerLattice:
-    """How integer pixels lie on the lattice: ``pixel = min(low + unit * value, low + width)``.
+class Part:
+    """What a decoder knows of one array before decoding it."""
 
-    Attributes
-    ----------
-    low : int
-        The smallest pixel.
-    width : int
-        The largest pixel less the smallest.
-    unit : int
-        1, or 2E+1 where values were rounded to its multiples because the range is wide.
-    tolerance : int
-        E in stored pixel values.
-    """
-
-    low: int
-    width: int
-    unit: int
+    span: int
     tolerance: int
+    tolerances: NDArray[np.int32] | None = None
 
-    @property
-    def span(self) -> int:
-        """The largest lattice value."""
-        return (self.width + self.unit // 2) // self.unit
 
-    def parts(self) -> list[tuple[int, int]]:
-        """Return span and tolerance of each array that is coded, most significant first."""
-        tolerance = min(self.tolerance, self.span) if self.unit == 1 else 0
-        if self.span <= SPAN_LIMIT:
-            return [(self.span, tolerance)]
-        count = -(-self.span.bit_length() // PART_BITS)
-        return [(self.span >> PART_BITS * (count - 1), 0)] + [(2**PART_BITS - 1, 0)] * (count - 1)
+class Lattice(ABC):
+    """How the pixels of one tile lie on whole numbers."""
 
-    def describe(self) -> dict[str, int]:
-        """Return the numbers of the lattice by name."""
-        return {"minimum": self.low, "maximum": self.low + self.width, "tolerance": self.tolerance}
+    @abstractmethod
+    def parts(self) -> list[Part]:
+        """Return what is known of each array that is coded, most significant first."""
 
-    def write(self, writer: Writer) -> None:
-        """Write what `read` reads."""
-        writer.signed(self.low)
-        writer.number(self.width)
-        writer.number(self.tolerance)
-        writer.number(0 if self.unit == 1 else 1)
-
-    def split(self, cropped: NDArray[Any]) -> list[LatticeTile]:
+    @abstractmethod
+    def split(self, pixels: NDArray[Any]) -> list[LatticeTile]:
         """Return the arrays that are coded for pixels (nz, ny, nx)."""
-        parts = self.parts()
-        if self.width == 0:
-            return [LatticeTile(np.zeros(cropped.shape, np.int32), 0, 0)]
-        if self.unit == 1 and len(parts) == 1 and cropped.dtype.itemsize < 8:
-            values = np.empty(cropped.shape, np.int32)
-            kernels.lower(np.ascontiguousarray(cropped).reshape(-1), self.low, values.reshape(-1))
-            return [LatticeTile(values, *parts[0])]
-        # Modulo 2**64, so that every integer type fits.
-        index = cropped.astype(np.uint64) - np.uint64(self.low % 2**64)
-        if self.unit > 1:
-            half, unit = np.uint64(self.unit // 2), np.uint64(self.unit)
-            index = index // unit + (index % unit > half)
-        tiles = []
-        for place, (span, tolerance) in enumerate(reversed(parts)):
-            piece = index >> np.uint64(PART_BITS * place)
-            if place < len(parts) - 1:
-                piece = piece & np.uint64(2**PART_BITS - 1)
-            tiles.append(LatticeTile(piece.astype(np.int32), span, tolerance))
-        return tiles[::-1]
 
+    @abstractmethod
     def pixels(self, values: list[NDArray[np.int32]], dtype: np.dtype[Any]) -> NDArray[Any]:
         """Return the pixels (nz, ny, nx) of decoded arrays."""
-        if self.unit == 1 and len(values) == 1 and dtype.itemsize < 8:
-            out = np.empty(values[0].shape, dtype)
-            kernels.raise_(values[0].reshape(-1), self.low, out.reshape(-1))
-            return out
-        index = np.zeros(values[0].shape, np.uint64)
-        for part in values:
-            index = (index << np.uint64(PART_BITS)) | part.astype(np.uint64)
-        # A hostile index may lie beyond the span. The last multiple may lie above the largest pixel, even above 2**64:
-        # only those below it are multiplied.
-        below = np.minimum(index, np.uint64(self.width // self.unit))
-        offset = np.where(index > below, np.uint64(self.width), below * np.uint64(self.unit))
-        return (offset + np.uint64(self.low % 2**64)).astype(dtype)
+
+    @abstractmethod
+    def exceptions(self, pixels: NDArray[Any], decoded: NDArray[Any]) -> NDArray[np.bool_] | None:
+        """Return which pixels must be kept bit for bit, given what they would decode to; None where none can be."""
+
+    @abstractmethod
+    def write(self, writer: Writer) -> None:
+        """Write the lattice's numbers."""
+
+    @abstractmethod
+    def describe(self) -> dict[str, Any]:
+        """Return the lattice's numbers by name."""
 
 
-def whole_tolerance(tolerance: Tolerance) -> int:
-    """Return the tolerance of integer pixels: the largest whole number not above it.
+# ------------------------------------------------------------------------------------------------------------ pieces
+
+
+def piece_parts(span: int) -> list[Part]:
+    """Return the parts of an array of a span that is coded without loss: itself, or its pieces of 16 bits."""
+    if span <= SPAN_LIMIT:
+        return [Part(span, 0)]
+    count = -(-span.bit_length() // PART_BITS)
+    return [Part(span >> PART_BITS * (count - 1), 0)] + [Part(2**PART_BITS - 1, 0)] * (count - 1)
+
+
+def cut(index: NDArray[np.uint64], span: int) -> list[LatticeTile]:
+    """Return the pieces of whole numbers up to `span`."""
+    parts = piece_parts(span)
+    tiles = []
+    for place, part in enumerate(reversed(parts)):
+        piece = index >> np.uint64(PART_BITS * place)
+        if place < len(parts) - 1:
+            piece = piece & np.uint64(2**PART_BITS - 1)
+        tiles.append(LatticeTile(piece.astype(np.int32), part.span, 0))
+    return tiles[::-1]
+
+
+def join(values: list[NDArray[np.int32]]) -> NDArray[np.uint64]:
+    """Return the whole numbers of their pieces."""
+    index = values[0].astype(np.uint64)
+    for part in values[1:]:
+        index = (index << np.uint64(PART_BITS)) | part.astype(np.uint64)
+    return index
+
+
+# --------------------------------------------------------------------------------------------------------- tolerance
+
+
+def checked(tolerance: Tolerance, shape: tuple[int, ...]) -> int | float | NDArray[np.float64]:
+    """Return a tolerance for pixels of a shape, an array in the three axes of coding, along which it may have length 1.
 
     Raises
     ------
     stackbound.errors.UsageError
-        It is below zero or not a number.
+        It is below zero, not a number, or does not broadcast.
     """
-    value = float(tolerance)  # type: ignore[arg-type]
-    if isnan(value) or value < 0:
-        raise UsageError(f"a tolerance of {tolerance} makes no sense", remedy="Give a number from 0 on.")
-    return 2**64 - 1 if value >= 2.0**64 else int(tolerance)  # type: ignore[arg-type]
+    values = np.asarray(tolerance)
+    if values.dtype.kind not in "iuf" or not (values >= 0).all():
+        raise UsageError(f"a tolerance of {tolerance} makes no sense", remedy="Give numbers from 0 on.")
+    if values.size == 1:
+        return values.item()  # type: ignore[no-any-return]
+    try:
+        np.broadcast_to(values, shape)
+    except ValueError:
+        raise UsageError(f"tolerances of shape {values.shape} do not fit a tile of shape {shape}") from None
+    lengths = (1,) * (len(shape) - values.ndim) + values.shape
+    whole = three_axes_shape(shape)
+    # Axes that coding merges must be there in full; the others keep a length of 1.
+    long = [axis for axis, length in enumerate(shape) if length != 1]
+    kept = [lengths[axis] for axis in long]
+    merged = long[:-2] if len(long) > 2 else []
+    if any(lengths[axis] > 1 for axis in merged):
+        full = tuple(shape[axis] if axis in merged else lengths[axis] for axis in range(len(shape)))
+        values = np.broadcast_to(values.reshape(lengths), full)
+        kept = [full[axis] for axis in long]
+    kept = [1] * (3 - len(kept)) + kept
+    return values.reshape(prod(kept[:-2]), kept[-2], kept[-1]).astype(np.float64)[tuple(slice(n) for n in whole)]
 
 
-def to_lattice(cropped: NDArray[Any], tolerance: Tolerance) -> IntegerLattice:
-    """Return the lattice of a tile's pixels under a tolerance.
-
-    Raises
-    ------
-    stackbound.errors.UsageError
-        The pixel type cannot be coded or the tolerance makes no sense.
-    """
-    if cropped.dtype.kind not in "iu" or not cropped.dtype.isnative:
-        raise UsageError(f"pixels of type {cropped.dtype} cannot be coded", remedy="Convert them to integers.")
-    low, high = (int(value) for value in kernels.extremes(np.ascontiguousarray(cropped).reshape(-1)))
-    width, bound = high - low, whole_tolerance(tolerance)
-    if width <= 2 * bound:
-        # One value serves all.
-        return IntegerLattice(low + width // 2, 0, 1, bound)
-    return IntegerLattice(low, width, 1 if width <= SPAN_LIMIT or bound == 0 else 2 * bound + 1, bound)
+def cropped_tolerance(
+    tolerance: int | float | NDArray[np.float64], shape: tuple[int, ...]
+) -> int | float | NDArray[np.float64]:
+    """Return the tolerance of what is left of a tile."""
+    if not isinstance(tolerance, np.ndarray):
+        return tolerance
+    cut_off = tuple(
+        slice(length) if own > 1 else slice(None) for own, length in zip(tolerance.shape, shape, strict=True)
+    )
+    return tolerance[cut_off]
 
 
-def read(reader: Reader, dtype: np.dtype[Any]) -> IntegerLattice:
-    """Return the lattice that a payload names for pixels of a type."""
-    if dtype.kind not in "iu":
-        raise damaged(f"it holds integers, not {dtype}")
-    info = np.iinfo(dtype)
-    found = read_any(reader)
-    if found.low < info.min or found.low + found.width > info.max:
-        raise damaged(f"its values do not fit {dtype}")
-    return found
+def write_tolerances(writer: Writer, tolerances: NDArray[np.int32] | None) -> None:
+    """Write tolerances that differ from pixel to pixel: along which axes, and their differences one by one."""
+    if tolerances is None:
+        writer.number(0)
+        return
+    from stackbound.entropy import write_numbers
+
+    writer.number(sum(1 << axis for axis in range(3) if tolerances.shape[axis] > 1) or 8)
+    write_numbers(writer, np.diff(tolerances.astype(np.int64).ravel(), prepend=0))
 
 
-def read_any(reader: Reader) -> IntegerLattice:
-    """Return the lattice that a payload names, whatever the pixels' type."""
-    low, width, bound = reader.signed(), reader.number(), reader.number()
-    wide = reader.number(1)
-    if wide and not 0 < 2 * bound < width:
-        raise damaged("its lattice is not one that an encoder chooses")
-    return IntegerLattice(low, width, 2 * bound + 1 if wide else 1, bound)
+def read_tolerances(reader: Reader, shape: tuple[int, int, int], most: int) -> NDArray[np.int32] | None:
+    """Return the tolerances of a tile (nz, ny, nx), or None where they are one."""
+    along = reader.number(8)
+    if along == 0:
+        return None
+    from stackbound.entropy import read_numbers
+
+    lengths = tuple(shape[axis] if along >> axis & 1 else 1 for axis in range(3))
+    numbers = read_numbers(reader, prod(lengths))
+    if numbers.size != prod(lengths):
+        raise damaged("there are too few tolerances")
+    tolerances = np.cumsum(numbers)
+    if tolerances.min() < 0 or tolerances.max() > most:
+        raise damaged("a tolerance is impossible")
+    return tolerances.astype(np.int32).reshape(lengths)
+
+
+# ------------------------------------------------------------------------------------------------------------- shape
 
 
 def three_axes_shape(shape: tuple[int, ...]) -> tuple[int, int, int]:
     """Return the shape (nz, ny, nx) in which a tile is coded: without axes of length 1, leading ones merged."""
-    long = [length for length in shape if length != 1]
-    long = [1] * (3 - len(long)) + long
-    depth = 1
-    for length in long[:-2]:
-        depth *= length
-    return depth, long[-2], long[-1]
+    long = [1, 1, 1] + [length for length in shape if length != 1]
+    return prod(long[:-2]), long[-2], long[-1]
 
 
 def three_axes(pixels: NDArray[Any]) -> NDArray[Any]:
@@ -197,16 +204,17 @@ def three_axes(pixels: NDArray[Any]) -> NDArray[Any]:
     return np.ascontiguousarray(pixels).reshape(three_axes_shape(pixels.shape))
 
 
-def crop(whole: NDArray[Any]) -> tuple[NDArray[Any], Any]:
+def crop(whole: NDArray[Any]) -> NDArray[Any]:
     """Return pixels (nz, ny, nx) without the trailing planes, rows and columns that hold nothing but the last pixel.
 
-    Chunks at the border of a Zarr array are padded with its fill value; so that costs nothing.
+    Chunks at the border of a Zarr array are padded with its fill value; so that costs nothing. Pixels are alike when
+    their bits are.
     """
-    last = whole[-1, -1, -1]
-    kept = whole
+    bits = whole.view(f"u{whole.dtype.itemsize}")
+    last = bits[-1, -1, -1]
+    kept = list(whole.shape)
     for axis in range(3):
-        while kept.shape[axis] > 1:
-            if not (kept.take(-1, axis) == last).all():
-                break
-            kept = kept[tuple(slice(None, -1) if axis == along else slice(None) for along in range(3))]
-    return kept, last
+        inside = bits[: kept[0], : kept[1], : kept[2]]
+        while kept[axis] > 1 and (inside.take(kept[axis] - 1, axis) == last).all():
+            kept[axis] -= 1
+    return whole[: kept[0], : kept[1], : kept[2]]

@@ -8,18 +8,21 @@ from math import prod
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound import entropy
+from stackbound import entropy, zstdcoder
 from stackbound.byteio import Reader, Writer, damaged
 from stackbound.errors import PluginError
 from stackbound.kernels import bound, inverse
 from stackbound.kernels.basis import COEFFICIENT_LIMIT, LENGTHS, cosine, widest
 from stackbound.kernels.blocks import counts
-from stackbound.lattice import LatticeTile
+from stackbound.lattice import LatticeTile, Part
 from stackbound.prediction import BlockPrediction, NoPrediction, Prediction
+from stackbound.stages import Encode
 
+CODERS = ("rans", "zstd")
 NO_PREDICTION, BLOCKS = 0, 1
 COSINE, MATRIX = 0, 1
-INDEX_LIMIT = 2**30
+INDEX_LIMIT = 2**28
+"""Differences of three of them fit 32 bits."""
 DEEPEST_BLOCK = 16
 MATRIX_LIMIT = 2**15
 
@@ -38,47 +41,72 @@ class Parts:
         return len(self.head) + len(self.indices) + len(self.residuals)
 
 
-def encode(tile: LatticeTile, prediction: Prediction) -> Parts:
-    """Return the bytes of a tile under a prediction; the error stays within the tolerance whatever that is."""
+def encode(tile: LatticeTile, prediction: Prediction, stage: Encode) -> Parts:
+    """Return the bytes of a tile under a prediction; the error stays within the tolerance whatever that is.
+
+    Raises
+    ------
+    stackbound.errors.PluginError
+        The stage names a coder that decoders do not know.
+    """
+    if stage.coder not in CODERS:
+        raise PluginError(f"coder {stage.coder!r} is not one of {CODERS}", where=f"encode {stage.name}")
+    plain = stage.coder == "zstd"
     writer = Writer()
+    writer.number(CODERS.index(stage.coder))
     indices = b""
     if isinstance(prediction, BlockPrediction):
         checked = check(prediction, tile)
         _write_prediction(writer, checked)
         grid = counts(tile.values.shape, checked.block)
-        indices = entropy.encode_indices(checked.indices.reshape(prod(checked.block), -1), checked.block, grid)
+        flat = checked.indices.reshape(prod(checked.block), -1)
+        indices = zstdcoder.encode(flat, stage.effort) if plain else entropy.encode_indices(flat, checked.block, grid)
         predicted = form(checked, tile.values.shape, tile.span)
     else:
         writer.number(NO_PREDICTION)
         predicted = form(prediction, tile.values.shape, tile.span)
-    wide = 2 * tile.tolerance + 1
     residuals = np.empty_like(predicted)
-    bound.residual(tile.values, predicted, wide, residuals)
-    coded = entropy.encode_residuals(residuals)
-    bound.reconstruct(predicted, residuals, wide, tile.span, predicted)
+    if tile.tolerances is None:
+        bound.residual(tile.values, predicted, 2 * tile.tolerance + 1, residuals)
+    else:
+        bound.residual_each(tile.values, predicted, 2 * tile.tolerances + 1, residuals)
+    coded = zstdcoder.encode(residuals, stage.effort) if plain else entropy.encode_residuals(residuals)
+    _pull(predicted, residuals, Part(tile.span, tile.tolerance, tile.tolerances))
     return Parts(bytes(writer.data), indices, coded, predicted)
 
 
-def decode(reader: Reader, shape: tuple[int, int, int], span: int, tolerance: int) -> NDArray[np.int32]:
+def decode(reader: Reader, shape: tuple[int, int, int], part: Part) -> NDArray[np.int32]:
     """Return the lattice values of a tile (nz, ny, nx)."""
+    plain = CODERS[reader.number(len(CODERS) - 1)] == "zstd"
     kind = reader.number(BLOCKS)
     prediction: Prediction = NoPrediction()
     if kind == BLOCKS:
-        prediction = _read_prediction(reader, shape)
-    predicted = form(prediction, shape, span)
-    residuals = entropy.decode_residuals(reader, shape)
-    bound.reconstruct(predicted, residuals, 2 * tolerance + 1, span, predicted)
+        prediction = _read_prediction(reader, shape, plain)
+    predicted = form(prediction, shape, part.span)
+    if plain:
+        _pull(predicted, zstdcoder.decode(reader, prod(shape)).reshape(shape), part)
+    else:
+        _pull(predicted, entropy.decode_residuals(reader, shape), part)
     return predicted
+
+
+def _pull(predicted: NDArray[np.int32], residuals: NDArray[np.int32], part: Part) -> None:
+    """Turn a prediction into the decoded values, in place."""
+    if part.tolerances is None:
+        bound.reconstruct(predicted, residuals, 2 * part.tolerance + 1, part.span, predicted)
+    else:
+        bound.reconstruct_each(predicted, residuals, 2 * part.tolerances + 1, part.span, predicted)
 
 
 def describe(reader: Reader, span: int) -> dict[str, object]:
     """Return in words what the first array of a tile is predicted with."""
     if span == 0:
         return {"mode": "constant"}
+    coder = CODERS[reader.number(len(CODERS) - 1)]
     if reader.number(BLOCKS) == NO_PREDICTION:
-        return {"mode": "none"}
+        return {"mode": "none", "coder": coder}
     block = [LENGTHS[reader.number(len(LENGTHS) - 1)] for _ in range(3)]
-    return {"mode": "transform", "block": block}
+    return {"mode": "transform", "block": block, "coder": coder}
 
 
 def form(prediction: Prediction, shape: tuple[int, int, int], span: int) -> NDArray[np.int32]:
@@ -150,7 +178,7 @@ def _write_prediction(writer: Writer, prediction: BlockPrediction) -> None:
         writer.number(step)
 
 
-def _read_prediction(reader: Reader, shape: tuple[int, int, int]) -> BlockPrediction:
+def _read_prediction(reader: Reader, shape: tuple[int, int, int], plain: bool) -> BlockPrediction:
     depth, height, width = (LENGTHS[reader.number(len(LENGTHS) - 1)] for _ in range(3))
     block = (depth, height, width)
     if depth > DEEPEST_BLOCK or any(side >= 2 * length for side, length in zip(block, shape, strict=True)):
@@ -172,7 +200,11 @@ def _read_prediction(reader: Reader, shape: tuple[int, int, int]) -> BlockPredic
     if steps.min() < 1:
         raise damaged("a step is zero")
     grid = counts(shape, block)
-    indices = entropy.decode_indices(reader, block, grid)
+    if plain:
+        indices = zstdcoder.decode(reader, frequencies * prod(grid)).reshape(frequencies, -1)
+        indices = np.clip(indices, -INDEX_LIMIT, INDEX_LIMIT)
+    else:
+        indices = entropy.decode_indices(reader, block, grid)
     return BlockPrediction(
         block, tuple(bases), np.broadcast_to(steps.reshape(-1), (frequencies,)).reshape(block).copy(),
         indices.reshape(*block, -1),

@@ -98,14 +98,14 @@ def test_narrow_wide_types_cost_no_more() -> None:
 
 def test_tiles_say_what_they_are() -> None:
     """A payload names its version, its tolerance, its range and how it is predicted."""
-    told = describe(plain_coder(block=[1, 8, 8], step=4).encode(FIELD, 3))
+    told = describe(plain_coder(block=[1, 8, 8], step=4).encode(FIELD, 3), FIELD.shape, FIELD.dtype)
 
     assert told["version"] == 1
     assert told["tolerance"] == 3
     assert told["mode"] == "transform"
     assert told["block"] == [1, 8, 8]
     assert (told["minimum"], told["maximum"]) == (FIELD.min(), FIELD.max())
-    assert describe(TileCoder(PredictNone(), Rans()).encode(FIELD, 3))["mode"] == "none"
+    assert describe(TileCoder(PredictNone(), Rans()).encode(FIELD, 3), FIELD.shape, FIELD.dtype)["mode"] == "none"
 
 
 @pytest.mark.parametrize("tolerance", [-1, float("nan"), -0.001])
@@ -185,7 +185,7 @@ def test_arbitrary_bytes_are_refused(noise: bytes) -> None:
         with pytest.raises(TileError):
             decode(payload, (5, 6), np.dtype(np.uint16))
         with pytest.raises(TileError):
-            describe(payload[:8])
+            describe(payload[:8], (5, 6), np.dtype(np.uint16))
 
 
 def test_tile_of_another_place_is_refused() -> None:

@@ -81,7 +81,7 @@ class Liar(Predict):
         sides = [rng.choice([s for s in (1, 2, 4, 8, 16, 32) if s < 2 * n]) for n in tile.values.shape]
         block = (min(int(sides[0]), 16), int(sides[1]), int(sides[2]))
         blocks = prod(counts(tile.values.shape, block))
-        size_of = 2 ** int(rng.integers(0, 31))
+        size_of = 2 ** int(rng.integers(0, 32))
         indices = rng.integers(-size_of, size_of, (*block, blocks))
         steps = rng.integers(1, 2 ** int(rng.integers(1, 26)) + 1, block)
         bases = tuple(

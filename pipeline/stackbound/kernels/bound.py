@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -35,3 +37,27 @@ def reconstruct(
     step, most = np.float64(wide), np.float64(span)
     for i in range(p.size):
         x[i] = np.int32(min(max(np.float64(p[i]) + step * np.float64(r[i]), 0.0), most))
+
+
+@kernel
+def residual_each(values: Any, predicted: Any, wide: Any, out: Any) -> None:
+    """As `residual` with an odd `wide` (nz, ny, nx) of its own for each pixel, axes of length 1 standing for all."""
+    for z in range(values.shape[0]):
+        for y in range(values.shape[1]):
+            own = wide[z % wide.shape[0], y % wide.shape[1]]
+            for x in range(values.shape[2]):
+                difference = np.float64(values[z, y, x] - predicted[z, y, x])
+                quotient = difference / own[x % own.size]
+                out[z, y, x] = np.int32((quotient + 6755399441055744.0) - 6755399441055744.0)
+
+
+@kernel
+def reconstruct_each(predicted: Any, residuals: Any, wide: Any, span: int, out: Any) -> None:
+    """As `reconstruct` with a `wide` of its own for each pixel."""
+    most = np.float64(span)
+    for z in range(predicted.shape[0]):
+        for y in range(predicted.shape[1]):
+            own = wide[z % wide.shape[0], y % wide.shape[1]]
+            for x in range(predicted.shape[2]):
+                value = np.float64(predicted[z, y, x]) + np.float64(own[x % own.size]) * np.float64(residuals[z, y, x])
+                out[z, y, x] = np.int32(min(max(value, 0.0), most))

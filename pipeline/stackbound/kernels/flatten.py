@@ -61,7 +61,9 @@ def _sum_of_products(name: str, terms: list[tuple[str, str, str]]) -> list[str]:
     lines = []
     for start in range(0, len(terms), TERMS_PER_LINE):
         text = "".join(f" {sign} {value} * {factor}" for value, sign, factor in terms[start : start + TERMS_PER_LINE])
-        text = name + text if start else text[1:].removeprefix("+ ").replace("- ", "-", 1 if text.startswith(" -") else 0)
+        text = (
+            name + text if start else text[1:].removeprefix("+ ").replace("- ", "-", 1 if text.startswith(" -") else 0)
+        )
         lines.append(f"{name} = {text}")
     return lines
 
