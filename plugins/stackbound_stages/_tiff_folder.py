@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import json
+import re
 from collections import Counter
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -17,12 +18,12 @@ from stackbound.errors import SourceError, UsageError
 from stackbound.sources import is_litter, natural_key
 from stackbound.stages import Index, SourceFile, StackInfo
 
-from ._flat import FlatPixels
 from ._plane_names import Arrangement, arrange
-from ._stored import Pixels, StoredSource, as_path, look_at
+from ._stored import StoredSource, as_path, look_at
 from ._tiff_ifd import CUT, Page, read_page_table
 from ._tiff_metadata import Metadata, read_metadata
-from ._tiff_pages import CodedPlanes, plane_offset
+from ._tiff_pages import plane_offset
+from ._tiff_planes import Plane, PlaneFiles, plane_texts
 from ._tiff_series import check_dtype, watched
 
 OpenFile = Callable[[Path, str | None], StoredSource]
@@ -52,7 +53,7 @@ def open_planes(source: object, suffixes: tuple[str, ...], axes: str | None, ope
     else:
         assert isinstance(source, list | tuple)
         paths = sorted((Path(one) for one in source), key=natural_key)
-    if len(paths) == 1:
+    if len(paths) == 1 or _is_ome_set(paths):
         opened = open_file(paths[0], axes)
     elif len(read_page_table(paths[0], str(paths[0])).pages) == 1:
         opened = _open_single_planes(paths, axes)
@@ -69,68 +70,24 @@ def open_planes(source: object, suffixes: tuple[str, ...], axes: str | None, ope
     return opened
 
 
+def _is_ome_set(paths: Sequence[Path]) -> bool:
+    """Return whether the OME-XML of the first file lists just these files as the places of one image's planes."""
+    try:
+        with tifffile.TiffFile(paths[0], _multifile=False) as tiff:
+            text = tiff.ome_metadata or ""
+    except (OSError, tifffile.TiffFileError):
+        return False  # the reader of planes says what is wrong
+    return {path.name for path in paths} == set(re.findall(r'FileName="([^"]+)"', text))
+
+
 # ------------------------------------------------------------------------------------------------- a plane per file
-
-
-@dataclass(frozen=True)
-class _Plane:
-    """Where the one plane of a file lies; no offset where it must be decoded."""
-
-    path: Path
-    page: Page
-    offset: int | None
-    dtype: np.dtype[Any]
-
-
-class _PlaneFiles:
-    """Planes in files of their own, one file open at a time."""
-
-    def __init__(self, planes: Sequence[_Plane], lead: Index, shape: Index) -> None:
-        self._planes, self._lead, self._shape = planes, lead, shape
-        self._open: tuple[int, Pixels] | None = None
-
-    @property
-    def whole_planes(self) -> bool:
-        """Whether planes must be decoded."""
-        return any(plane.offset is None for plane in self._planes)
-
-    def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
-        """Read a box into `out`."""
-        lead = len(self._lead)
-        for index in np.ndindex(*out.shape[:lead]):
-            place = tuple(low + step for low, step in zip(start, index, strict=False))
-            number = int(np.ravel_multi_index(place, self._lead))
-            self._plane(number).fill(start[lead:], stop[lead:], out[index])
-
-    def _plane(self, number: int) -> Pixels:
-        if self._open is None or self._open[0] != number:
-            self.close()
-            self._open = number, self._opened(self._planes[number])
-        return self._open[1]
-
-    def _opened(self, plane: _Plane) -> Pixels:
-        name = str(plane.path)
-        if plane.offset is not None:
-            return FlatPixels(plane.path, plane.offset, self._shape, plane.dtype, name)
-        try:
-            with watched(name):
-                tiff = tifffile.TiffFile(plane.path, _multifile=False)
-        except (OSError, tifffile.TiffFileError) as error:
-            raise SourceError(f"the file cannot be read as TIFF: {error}", where=name, remedy=CUT) from error
-        return CodedPlanes(tiff, [plane.page], tiff.pages.first, self._shape, len(self._shape), name)
-
-    def close(self) -> None:
-        """Close the open file."""
-        if self._open is not None:
-            self._open[1].close()
-            self._open = None
 
 
 def _open_single_planes(paths: Sequence[Path], axes: str | None) -> StoredSource:
     shape, dtype, letters, metadata = _first_plane(paths[0])
     arrangement, inner = _arranged(paths, axes, letters, shape)
     reference = read_page_table(paths[0], str(paths[0])).pages[0]
-    planes: list[_Plane] = []
+    planes: list[Plane] = []
     files: list[SourceFile] = []
     for number in arrangement.order:
         path = paths[number]
@@ -145,10 +102,13 @@ def _open_single_planes(paths: Sequence[Path], axes: str | None) -> StoredSource
                 remedy="Keep only the planes of one stack in the folder, or give the files one by one.",
             )
         offset = plane_offset(page, page.grid(), table.size, name)
-        planes.append(_Plane(path, page, offset, dtype.newbyteorder(table.byteorder)))  # type: ignore[arg-type]
+        planes.append(Plane(path, page, offset, dtype.newbyteorder(table.byteorder)))  # type: ignore[arg-type]
     layout = Layout(arrangement.axes + inner, arrangement.shape + shape)
-    pixels = _PlaneFiles(planes, arrangement.shape, shape)
+    pixels = PlaneFiles(planes, arrangement.shape, shape)
     metadata.notes.insert(0, arrangement.note)
+    texts = plane_texts((plane.path, plane.page) for plane in planes)
+    if texts is not None:
+        metadata.headers["plane-descriptions.jsonl"] = texts
     metadata.attributes |= {"axes": layout.stored, "kind": "planes"}
     return StoredSource(_info(layout, dtype, metadata, pixels.whole_planes), layout, pixels, files)
 

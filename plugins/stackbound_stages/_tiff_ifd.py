@@ -56,6 +56,8 @@ class Page:
     fields: dict[int, tuple[int, ...]]
     offsets: NDArray[np.int64]
     counts: NDArray[np.int64]
+    text: tuple[int, int] | None = None
+    """Position and length of the description."""
 
     def field(self, code: int) -> int:
         """Return the first value of a field, or its default."""
@@ -181,11 +183,15 @@ class _Reader:
         singles = self.singles
         fields: dict[int, tuple[int, ...]] = {258: (1,)}
         places: dict[int, NDArray[np.int64]] = {}
-        for code, kind, length, raw in struct.iter_unpack(self.order + form, table[:-word]):
+        text = None
+        rows = struct.iter_unpack(self.order + form, table[:-word])
+        for row, (code, kind, length, raw) in enumerate(rows, 1):
             size = length * _SIZES.get(kind, 1)
             if size > word:
                 self._check_value(code, size, raw, number)
-            if code in _PLACES:
+            if code == 270:
+                text = (self._whole(raw) if size > word else offset + head + row * entry - word), size
+            elif code in _PLACES:
                 places[code] = self._values(code, kind, length, raw, number)
             elif code in _READ:
                 if length == 1 and kind in singles:  # nearly all fields of nearly all files
@@ -200,7 +206,7 @@ class _Reader:
             counts = np.zeros_like(offsets)
         if len(counts) != len(offsets):
             raise SourceError("the page lists other numbers of strips and lengths", where=self._at(number), remedy=CUT)
-        return Page(number, offset, fields, offsets, counts), self._whole(table[-word:])
+        return Page(number, offset, fields, offsets, counts, text), self._whole(table[-word:])
 
     def _check_value(self, code: int, size: int, raw: bytes, number: int) -> None:
         """Refuse a field whose value lies behind the end of the file; the text on the pages often comes last."""

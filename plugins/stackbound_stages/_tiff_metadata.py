@@ -16,8 +16,15 @@ from ._units import unit_name
 _LAYOUT_TAGS = {273, 279, 324, 325, 288, 289, 347}
 """Fields that only say where bytes lie or how they are coded; they mean nothing without the file."""
 
-_OWN_TAGS = {32997, 32998, 33432, 34377, 34665, 34853, 40965, 50838, 50839}
-"""Fields beyond the baseline that are kept in other ways, or that point to tables elsewhere in the file."""
+_OWN_TAGS = (
+    {254, 255, 256, 257, 258, 259, 262, 266, 270, 273, 277, 278, 279, 280, 281, 282, 283, 284, 288, 289, 292, 293, 296}
+    | {305, 306, 315, 317, 320, 322, 323, 324, 325, 330, 338, 339, 340, 341, 347, 400, 529, 530, 531, 532}
+    | {32997, 32998, 33432, 34377, 34665, 34853, 40965, 50838, 50839}
+)
+"""Fields that a saver writes by itself or that point elsewhere in the file, and smallest and largest values, which need
+not hold any more. All others come back byte for byte."""
+
+_LONGEST_FIELD = 2**20
 
 _PRINT_RESOLUTIONS = {0, 1, 72, 96, 100, 150, 200, 300, 400, 600, 1200}
 """Dots per inch that programs write when they know nothing of the image."""
@@ -107,7 +114,7 @@ def _headers(tiff: tifffile.TiffFile, page: tifffile.TiffPage) -> dict[str, byte
         entry = {"code": tag.code, "name": tag.name, "type": int(tag.dtype), "count": tag.count}
         if tag.code not in _LAYOUT_TAGS:
             entry["value"] = _plain(tag.value)
-        if tag.code > 532 and tag.code not in _OWN_TAGS and tag.valuebytecount <= 2**16:
+        if tag.code not in _OWN_TAGS and tag.valuebytecount <= _LONGEST_FIELD:
             tiff.filehandle.seek(tag.valueoffset)
             entry["raw"] = base64.b64encode(tiff.filehandle.read(tag.valuebytecount)).decode()
         entries.append(entry)

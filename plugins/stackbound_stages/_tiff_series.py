@@ -44,7 +44,8 @@ def watched(name: str) -> Iterator[list[str]]:
     grave = [message for message in handler.messages if not _MINOR.search(message)]
     if grave:
         said = re.sub(r"<tifffile\.\w+[^>]*>\s*", "", grave[0])
-        raise SourceError(f"the file is damaged or incomplete: {said}", where=name, remedy=CUT)
+        together = "Put all files of the set into one folder." if "failed to read" in said else CUT
+        raise SourceError(f"the file is damaged or incomplete: {said}", where=name, remedy=together)
 
 
 class _Gather(logging.Handler):
@@ -81,12 +82,6 @@ def choose_series(tiff: tifffile.TiffFile, name: str) -> tuple[tifffile.TiffPage
         notes.append("A reduced copy of the image (a thumbnail) is left out.")
     if len(full[0].levels) > 1:
         notes.append(f"Only the full resolution is taken; {len(full[0].levels) - 1} smaller levels are left out.")
-    if getattr(full[0], "is_multifile", False):
-        raise SourceError(
-            "the stack is spread over several files, of which this is one",
-            where=name,
-            remedy="Export it as a single file, or give the folder if each file holds one plane.",
-        )
     return full[0], notes
 
 
@@ -143,8 +138,11 @@ def check_complete(tiff: tifffile.TiffFile, series: tifffile.TiffPageSeries, tab
     """Compare the planes that the file promises with those that it has."""
     if any(page is None for page in series.pages):
         missing = next(number for number, page in enumerate(series.pages, 1) if page is None)
+        several = bool(getattr(series, "is_multifile", False))
         raise SourceError(
-            "a plane that the metadata list is not in the file", where=f"{name}, plane {missing}", remedy=CUT
+            f"a plane that the metadata list is not in the {'set of files' if several else 'file'}",
+            where=f"{name}, plane {missing}",
+            remedy="Put all files of the set into one folder." if several else CUT,
         )
     key = series.keyframe
     planes = prod(series.shape) // max(1, prod(key.shape))

@@ -19,6 +19,7 @@ from ._tiff_folder import is_plane_list, list_planes, open_planes
 from ._tiff_ifd import CUT, PageTable, read_page_table
 from ._tiff_metadata import read_metadata
 from ._tiff_pages import CodedPlanes, SpacedPlanes, inner_axes, plane_offset
+from ._tiff_planes import plane_texts, spread_planes
 from ._tiff_series import check_complete, check_dtype, choose_series, plane_pages, stored_axes, watched
 
 SUFFIXES = (".tif", ".tiff", ".btf", ".tf2", ".tf8")
@@ -71,7 +72,17 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
             stored, shape, remarks = stored_axes(series, axes, name)
             layout = Layout(stored, shape)
             metadata = read_metadata(tiff, series.kind, stored)
-        pixels = _pixels(tiff, series, table, shape, path)
+        pixels: Pixels
+        if getattr(series, "is_multifile", False):
+            pixels, files = spread_planes(series, shape, name)
+            notes.append(f"The planes lie in {len(files)} files that belong together.")
+            tiff.close()
+        else:
+            pixels, files = _pixels(tiff, series, table, shape, path), [file]
+            if series.kind != "ome":
+                texts = plane_texts((path, page) for page in table.pages)
+                if texts is not None:
+                    metadata.headers["plane-descriptions.jsonl"] = texts
     except StackboundError as error:
         if tiff is not None:
             tiff.close()
@@ -81,7 +92,7 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
             tiff.close()
         raise SourceError(f"the file cannot be read as TIFF: {error}", where=name, remedy=CUT) from error
     if minor:
-        metadata.notes.append(f"{len(minor)} fields of the file cannot be read and are not kept.")
+        metadata.notes.append("Some fields of the file cannot be read and are not kept.")
     channels = dict(zip(layout.axes, layout.lengths, strict=True)).get("c", 0)
     info = StackInfo(
         kind=_KINDS.get(series.kind, "BigTIFF" if table.bigtiff else "TIFF"),
@@ -97,7 +108,7 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
         notes=(*notes, *remarks, *metadata.notes),
         plane_cost=2 if isinstance(pixels, CodedPlanes) and pixels.whole_planes else 0,
     )
-    return StoredSource(info, layout, pixels, [file])
+    return StoredSource(info, layout, pixels, files)
 
 
 def _pixels(

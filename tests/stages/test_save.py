@@ -10,7 +10,7 @@ import tifffile
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
-from stackbound.errors import UsageError
+from stackbound.errors import SourceError, UsageError
 from stackbound.sources import open_source
 from stackbound.stages import Index, OpenSource, Save, StackInfo
 from stackbound_stages.save_npy import NpySave
@@ -138,6 +138,21 @@ def test_an_imagej_stack_stays_one(tmp_path: Path) -> None:
     assert (before.scale, before.units) == (after.scale, after.units)
 
 
+def test_an_imagej_stack_beyond_the_limit_of_pages(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Beyond 4 GB an ImageJ hyperstack has one page, which all planes follow, and is read as such."""
+    tifffile.imwrite(tmp_path / "a.tif", FIVE, imagej=True, metadata={"axes": "TZCYX"})
+    monkeypatch.setattr("stackbound_stages.save_tiff.CLASSIC", 1000)
+
+    saved_again(TiffSave(), tmp_path / "a.tif", tmp_path / "b.tif")
+
+    with tifffile.TiffFile(tmp_path / "b.tif") as tiff:
+        assert (1, False, "imagej") == (len(tiff.pages), tiff.is_bigtiff, tiff.series[0].kind)
+    whole = (tmp_path / "b.tif").read_bytes()
+    (tmp_path / "b.tif").write_bytes(whole[:-1])
+    with pytest.raises(SourceError):
+        loaded(tmp_path / "b.tif")
+
+
 def test_an_imagej_stack_of_fewer_planes(tmp_path: Path) -> None:
     """A part of an ImageJ hyperstack gets a description that counts the planes that are there."""
     tifffile.imwrite(tmp_path / "a.tif", FIVE, imagej=True, metadata={"axes": "TZCYX"})
@@ -181,7 +196,7 @@ def test_colour_tables_white_zero_and_private_fields_stay(tmp_path: Path) -> Non
         metadata=None,
         description="an invented field",
         datetime="2001:02:03 04:05:06",
-        extratags=[(65000, 12, 2, (1.5, 2.5), True), (315, 2, 0, "nobody", True)],
+        extratags=[(65000, 12, 2, (1.5, 2.5), True), (315, 2, 0, "nobody", True), (274, 3, 1, 3, True)],
     )
 
     saved_again(TiffSave(), tmp_path / "p.tif", tmp_path / "p2.tif")
@@ -195,6 +210,7 @@ def test_colour_tables_white_zero_and_private_fields_stay(tmp_path: Path) -> Non
         assert (0, ">", "an invented field") == (int(page.photometric), tiff.byteorder, page.description)
         assert ("2001:02:03 04:05:06", "nobody") == (page.tags[306].value, page.tags[315].value)
         assert (1.5, 2.5) == page.tags[65000].value
+        assert 3 == page.tags[274].value
 
 
 # --------------------------------------------------------------------------------------------------------- OME-TIFF

@@ -511,6 +511,64 @@ def test_a_folder_of_stacks_needs_axes(tmp_path: Path) -> None:
     assert np.array_equal(FIVE[:, 0], pixels)
 
 
+def write_ome_set(folder: Path, names: list[str], stack: np.ndarray) -> None:
+    """Write a stack as one OME-TIFF file per time point, each holding the XML of all."""
+    folder.mkdir(exist_ok=True)
+    uuids = [f"urn:uuid:00000000-0000-4000-8000-00000000000{number}" for number in range(len(names))]
+    data = "".join(
+        f'<TiffData FirstT="{t}" FirstZ="{z}" IFD="{z}" PlaneCount="1"><UUID FileName="{name}">{uuid}</UUID></TiffData>'
+        for t, (name, uuid) in enumerate(zip(names, uuids, strict=True))
+        for z in range(stack.shape[1])
+    )
+    size = dict(zip("TZYX", stack.shape, strict=True))
+    for name, uuid, planes in zip(names, uuids, stack, strict=True):
+        xml = (
+            f'<OME xmlns="http://www.openmicroscopy.org/Schemas/OME/2016-06" UUID="{uuid}"><Image ID="Image:0">'
+            f'<Pixels ID="Pixels:0" DimensionOrder="XYZCT" Type="uint16" SizeC="1" '
+            + " ".join(f'Size{axis}="{length}"' for axis, length in size.items())
+            + f'><Channel ID="Channel:0" SamplesPerPixel="1"/>{data}</Pixels></Image></OME>'
+        )
+        tifffile.imwrite(folder / name, planes, metadata=None, description=xml.encode())
+
+
+@pytest.mark.parametrize("depth", [1, 5])
+def test_an_ome_tiff_of_several_files(tmp_path: Path, depth: int) -> None:
+    """A file of a multi-file OME-TIFF, or the folder of all, is the whole stack in the order of its XML."""
+    stack = FIVE.reshape(6, 5, 24, 32)[:3, :depth]
+    write_ome_set(tmp_path / "f", ["c.ome.tif", "a.ome.tif", "b.ome.tif"], stack)
+    expected = stack if depth > 1 else stack[:, 0]
+
+    for source in (tmp_path / "f" / "a.ome.tif", tmp_path / "f"):
+        with open_source(source) as opened:
+            info, pixels = opened.info, opened.read((0,) * expected.ndim, expected.shape)
+            assert 3 == len(opened.files)
+        assert ("tzyx" if depth > 1 else "tyx", "OME-TIFF") == (info.axes, info.kind)
+        assert np.array_equal(expected, pixels)
+
+
+def test_an_ome_tiff_that_lacks_a_file(tmp_path: Path) -> None:
+    """A multi-file OME-TIFF without one of its files is refused, with what to do."""
+    write_ome_set(tmp_path / "f", ["c.ome.tif", "a.ome.tif", "b.ome.tif"], FIVE.reshape(6, 5, 24, 32)[:3])
+    (tmp_path / "f" / "b.ome.tif").unlink()
+
+    with pytest.raises(SourceError, match=r"set of files.*one folder"):
+        loaded(tmp_path / "f" / "a.ome.tif")
+
+
+def test_descriptions_of_all_planes_are_kept(tmp_path: Path) -> None:
+    """Where each plane has a description of its own, all are kept, in a folder as in a file of many pages."""
+    (tmp_path / "f").mkdir()
+    for number, plane in enumerate(PLANES):
+        text = f"plane {number} µ".encode()
+        tifffile.imwrite(tmp_path / "f" / f"{number}.tif", plane, metadata=None, description=text)
+        tifffile.imwrite(tmp_path / "a.tif", plane, metadata=None, description=text, append=True)
+
+    for source in (tmp_path / "f", tmp_path / "a.tif"):
+        info, _ = loaded(source)
+        lines = info.headers["plane-descriptions.jsonl"].decode().splitlines()
+        assert [f'"plane {number} µ"' for number in range(5)] == lines
+
+
 # ------------------------------------------------------------------------------------------------------------- size
 
 
