@@ -15,7 +15,7 @@ from .tolerance import UNITS, Tolerance
 
 DEFAULTS = {
     "tile": "grid",
-    "predict": "transform",
+    "predict": "best",
     "transform": "dct",
     "quantize": "uniform",
     "encode": "rans",
@@ -117,7 +117,8 @@ def _explain_one(item: Any, source: Registry) -> str:
     path = _toml_path(loc)
     what, given = item["type"], item["input"]
     if what == "extra_forbidden":
-        return f"{path}: unknown key{_suggest(str(loc[-1]), _keys(item['loc'], source))}"
+        stage = f"of '{item['loc'][-2]}'" if kind is not None else "here"
+        return f"{path}: unknown key{_suggest(str(loc[-1]), _keys(item['loc'], source), stage)}"
     if what == "union_tag_invalid":
         name = given.get("name")
         return f"{path}: {source.unknown(kind or '', name) if isinstance(name, str) else 'name must be text.'}"
@@ -152,12 +153,12 @@ def _keys(loc: tuple[int | str, ...], source: Registry) -> Iterable[str]:
     ]
 
 
-def _suggest(word: str, known: Iterable[str]) -> str:
+def _suggest(word: str, known: Iterable[str], where: str) -> str:
     known = list(known)
     near = difflib.get_close_matches(word, known, n=1)
     if near:
         return f"; did you mean '{near[0]}'?"
-    return f"; the keys here are: {', '.join(known)}." if known else "."
+    return f"; the keys {where} are: {', '.join(known)}." if known else "."
 
 
 def _toml_path(loc: tuple[int | str, ...]) -> str:

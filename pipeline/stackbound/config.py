@@ -15,11 +15,11 @@ from typing import TYPE_CHECKING, Any
 from pydantic import ValidationError
 
 from . import _configmodel as model
-from .errors import ConfigError, PluginError, StackboundError, UsageError
-from .guard import guarded
+from .errors import ConfigError, UsageError
+from .guard import make
 from .plugins import Origin, Registry, registry
 from .recipes import read_document
-from .stages import Options, Stage
+from .stages import Options
 from .tolerance import UNITS, Tolerance, exact_decimal
 
 if TYPE_CHECKING:
@@ -220,23 +220,15 @@ def build(config: PipelineConfig, source: Registry | None = None) -> Pipeline:
         A stage raised while it was made; names it and where it comes from.
     """
     source = registry() if source is None else source
-    origins: dict[str, Origin] = {}
-
-    def make(kind: str, choice: Choice, **parts: Stage) -> Any:
-        cls = source.get(kind, choice.name)
-        origins[f"{kind}:{choice.name}"] = origin = source.origin(cls)
-        try:
-            return (cls if origin.builtin else guarded(cls, origin))(choice.options, **parts)
-        except StackboundError as error:
-            raise error.at(f"{kind} stage '{choice.name}'") from error.__cause__
-        except (Exception, SystemExit) as error:
-            what = f"The {kind} stage '{choice.name}' ({origin}) raised {type(error).__name__}: {error}."
-            raise PluginError(what, remedy="Tell the plugin's author.") from error
-
-    tile = make("tile", config.tile)
-    transform = make("transform", config.transform)
-    quantize = make("quantize", config.quantize)
-    predict = make("predict", config.predict, transform=transform, quantize=quantize)
-    encode = make("encode", config.encode)
-    figures = tuple(make("verify", figure) for figure in config.figures)
+    tile = make(source, "tile", config.tile.name, config.tile.options)
+    parts = {
+        kind: make(source, kind, choice.name, choice.options)
+        for kind, choice in (("transform", config.transform), ("quantize", config.quantize))
+    }
+    predict = make(source, "predict", config.predict.name, config.predict.options, **parts)
+    encode = make(source, "encode", config.encode.name, config.encode.options)
+    figures = tuple(make(source, "verify", figure.name, figure.options) for figure in config.figures)
+    used = [*((kind, getattr(config, kind).name) for kind in STAGES), *predict.others]
+    used += [("verify", figure.name) for figure in config.figures]
+    origins = {f"{kind}:{name}": source.origin(source.get(kind, name)) for kind, name in used}
     return Pipeline(config, tile, predict, encode, figures, origins)

@@ -18,16 +18,46 @@ from typing import Any
 import numpy as np
 
 from .errors import PluginError, StackboundError
-from .registry import CONTRACTS, Origin
-from .stages import Stage
+from .registry import CONTRACTS, Origin, Registry
+from .stages import Options, Stage
 
-__all__ = ["guarded"]
+__all__ = ["guarded", "make"]
 
 EVERY = 64
 """Every so many questions one is asked twice, the first too: answers that differ would make runs differ."""
 
 REPEATABLE = {"tile", "transform", "quantize", "predict", "encode"}
 """Kinds of stage whose answers decide the bytes of a store."""
+
+
+def make(source: Registry, kind: str, name: str, options: Options | None = None, **parts: Stage | None) -> Any:
+    """Return a stage of a registry, behind a guard where it is not built in.
+
+    Parameters
+    ----------
+    source : Registry
+        Where the class is looked up.
+    kind, name : str
+        Which stage.
+    options : Options, optional
+        Its defaults without.
+    **parts : Stage or None
+        The stages that a predict stage composes.
+
+    Raises
+    ------
+    stackbound.errors.PluginError
+        The stage raised while it was made; names it and where it comes from.
+    """
+    cls = source.get(kind, name)
+    origin = source.origin(cls)
+    try:
+        return (cls if origin.builtin else guarded(cls, origin))(options, **parts)
+    except StackboundError as error:
+        raise error.at(f"{kind} stage '{name}'") from error.__cause__
+    except (Exception, SystemExit) as error:
+        what = f"The {kind} stage '{name}' ({origin}) raised {type(error).__name__}: {error}."
+        raise PluginError(what, remedy="Tell the plugin's author.") from error
 
 
 @cache

@@ -343,6 +343,11 @@ class Predict(Stage):
         self.transform = transform
         self.quantize = quantize
 
+    @property
+    def others(self) -> tuple[tuple[str, str], ...]:
+        """Kind and name of every stage that this one uses besides those that it was given; kept in the store."""
+        return ()
+
     def plan(self, samples: Sequence[LatticeTile], size: Callable[[LatticeTile, Prediction], int]) -> Plan:
         """Return what is chosen once for a stack, from some of its tiles.
 

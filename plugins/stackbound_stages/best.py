@@ -6,7 +6,6 @@ from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING
 
 from pydantic import Field, field_validator
-
 from stackbound import hookimpl
 from stackbound.stages import Options, Plan, Predict, Stage
 
@@ -53,15 +52,17 @@ class PredictBest(Predict):
         name = min(stages, key=bytes_of) if len(stages) > 1 else next(iter(stages))
         return stages[name].predict(tile, plan.get(name, {}), size)
 
+    @property
+    def others(self) -> tuple[tuple[str, str], ...]:
+        """The predictors to choose among."""
+        return tuple(("predict", name) for name in self.options.among)
+
     def _stages(self) -> dict[str, Predict]:
+        from stackbound.guard import make
         from stackbound.plugins import registry
 
-        found = registry()
-        made = {}
-        for name in self.options.among:
-            cls = found.get("predict", name)
-            made[name] = cls(None, transform=self.transform, quantize=self.quantize)  # type: ignore[call-arg]
-        return made  # type: ignore[return-value]
+        parts = {"transform": self.transform, "quantize": self.quantize}
+        return {name: make(registry(), "predict", name, None, **parts) for name in self.options.among}
 
 
 @hookimpl
