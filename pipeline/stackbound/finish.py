@@ -7,6 +7,7 @@ from fractions import Fraction
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from stackbound.compare import Errors
 from stackbound.errors import IntegrityError, PluginError, StackboundError
 from stackbound.hashes import sha256_bytes, sha256_file
 from stackbound.log import Record, regions_root, write_log
@@ -38,7 +39,8 @@ def complete_store(
         Number, size and hash of the source's files.
     """
     regions = [result.record for result in results]
-    root_metadata = root_json(description, regions_root(regions))
+    found = sum((result.errors for result in results), Errors())
+    root_metadata = root_json(description, regions_root(regions), (found.lowest or 0, found.highest or 0))
     write_file(target.partial / "zarr.json", root_metadata)
     totals = sum_up(regions)
     totals["figures"] = _combine(figures, results, description.info)

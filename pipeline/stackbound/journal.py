@@ -6,11 +6,14 @@ count.
 
 from __future__ import annotations
 
+import contextlib
 import json
 import os
+from collections.abc import Iterable
 from pathlib import Path
 from typing import IO, Any
 
+from stackbound.errors import TargetError
 from stackbound.hashes import sha256_bytes
 from stackbound.log import Record, canonical
 
@@ -47,27 +50,41 @@ class Journal:
         return header, entries
 
     def start(self, header: Record, entries: dict[int, Record]) -> None:
-        """Begin the file anew with what still counts, and keep it open for more."""
-        self._file = self.path.open("wb")
-        for record in (header, *entries.values()):
-            self._file.write(_line(record))
-        self._sync()
+        """Begin the file anew with what still counts, and keep it open for more.
+
+        Raises
+        ------
+        stackbound.errors.TargetError
+            The disk is full, or the file cannot be written; also raised by `add`.
+        """
+        try:
+            self._file = self.path.open("wb")
+        except OSError as error:
+            raise self._failed(error) from error
+        self._write(_line(record) for record in (header, *entries.values()))
 
     def add(self, entry: Record) -> None:
         """Append the entry of one region; it counts when this returns."""
-        assert self._file is not None
-        self._file.write(_line(entry))
-        self._sync()
+        self._write([_line(entry)])
 
-    def _sync(self) -> None:
+    def _write(self, lines: Iterable[bytes]) -> None:
         assert self._file is not None
-        self._file.flush()
-        os.fsync(self._file.fileno())
+        try:
+            self._file.writelines(lines)
+            self._file.flush()
+            os.fsync(self._file.fileno())
+        except OSError as error:
+            raise self._failed(error) from error
+
+    def _failed(self, error: OSError) -> TargetError:
+        return TargetError(f"The journal cannot be written ({error.strerror}).", where=str(self.path))
 
     def close(self) -> None:
         """Close the file."""
         if self._file is not None:
-            self._file.close()
+            # Bytes that a full disk did not take were reported when they were written.
+            with contextlib.suppress(OSError):
+                self._file.close()
             self._file = None
 
 

@@ -41,10 +41,13 @@ class Result:
         Its record in the log.
     parts : tuple
         What it adds to each figure.
+    errors : Errors
+        Its errors, and the range of the source's pixels.
     """
 
     record: Record
     parts: tuple[Any, ...]
+    errors: compare.Errors
 
 
 @dataclass
@@ -158,7 +161,7 @@ class RegionWorker:
             "file_sha256": sha256_file(path),
         }
         parts = tuple(_measure_figure(figure, original, decoded, self.info, box) for figure in self.figures)
-        return Result(record, parts)
+        return Result(record, parts, errors)
 
 
 def read_source(source: OpenSource, info: StackInfo, box: Box) -> Pixels:

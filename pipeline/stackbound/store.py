@@ -42,6 +42,9 @@ PLUGIN_FOLDER = "stackbound/plugins"
 
 AXIS_TYPES = {"t": "time", "c": "channel", "z": "space", "y": "space", "x": "space"}
 
+# Well apart in pairs, and for most kinds of colour blindness the first two as well.
+COLOURS = ("00FF00", "FF00FF", "00FFFF", "FFFF00", "FF0000", "0000FF")
+
 # Names that Windows reserves or characters that it refuses; a store has to survive a copy to any file system.
 _RESERVED = {"con", "prn", "aux", "nul", *(f"com{i}" for i in range(10)), *(f"lpt{i}" for i in range(10))}
 _FORBIDDEN = set('<>:"/\\|?*') | {chr(code) for code in range(32)}
@@ -127,16 +130,27 @@ def array_json(store: Description) -> bytes:
     )
 
 
-def root_json(store: Description, regions_root: str) -> bytes:
-    """Return the metadata of the image: OME multiscales and the promise."""
+def root_json(store: Description, regions_root: str, extent: tuple[float, float]) -> bytes:
+    """Return the metadata of the image: OME multiscales and the promise.
+
+    Parameters
+    ----------
+    regions_root : str
+        Tree root over the region records of the log.
+    extent : tuple of numbers
+        Smallest and largest finite pixel of the source, for viewers to start with.
+    """
     info = store.info
     units = info.units or (None,) * len(info.axes)
     scale = info.scale or (None,) * len(info.axes)
     axes = [_axis(name, unit) for name, unit in zip(info.axes, units, strict=True)]
     factors = [1.0 if factor is None else float(factor) for factor in scale]
     dataset = {"path": ARRAY, "coordinateTransformations": [{"type": "scale", "scale": factors}]}
+    ome: dict[str, Any] = {"version": "0.5", "multiscales": [{"name": "stack", "axes": axes, "datasets": [dataset]}]}
+    if info.channel_names:
+        ome["omero"] = {"channels": _channels(info, extent)}
     attributes = {
-        "ome": {"version": "0.5", "multiscales": [{"name": "stack", "axes": axes, "datasets": [dataset]}]},
+        "ome": ome,
         "stackbound": {
             "format_version": FORMAT_VERSION,
             "version": store.version,
@@ -158,6 +172,18 @@ def group_json(attributes: Mapping[str, Any] | None = None) -> bytes:
 def _axis(name: str, unit: str | None) -> dict[str, str]:
     axis = {"name": name, "type": AXIS_TYPES[name]}
     return axis if unit is None else {**axis, "unit": unit}
+
+
+def _channels(info: StackInfo, extent: tuple[float, float]) -> list[dict[str, Any]]:
+    """Return names for viewers; the specification wants a colour and a window beside each."""
+    floats = info.dtype.kind == "f"
+    limits = np.finfo(info.dtype) if floats else np.iinfo(info.dtype)
+    low, high = extent if floats else (int(limits.min), int(limits.max))
+    window = {"min": low, "max": high, "start": extent[0], "end": extent[1]}
+    return [
+        {"label": name, "color": COLOURS[number % len(COLOURS)], "active": True, "window": window}
+        for number, name in enumerate(info.channel_names)
+    ]
 
 
 def source_record(info: StackInfo) -> dict[str, Any]:

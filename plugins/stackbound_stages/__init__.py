@@ -14,6 +14,7 @@ BUILTIN: tuple[str, ...] = (
     "grid",
     "transform",
     "none",
+    "neighbours",
     "best",
     "dct",
     "uniform",

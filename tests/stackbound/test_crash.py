@@ -22,7 +22,7 @@ CHILD = Path(__file__).with_name("crash_child.py")
 @pytest.mark.skipif(not hasattr(os, "fork"), reason="needs processes that can be forked")
 @pytest.mark.parametrize(("what", "allowed"), [("new", {"nothing"}), ("overwrite", {"old", "aside"})])
 def test_killed_at_every_step(kept, tmp_path, what, allowed):
-    """Wherever a run is killed: no half store has the final name, no old store is lost, resuming gives the same bytes."""
+    """Wherever a run is killed: no half store has the final name, no old store is lost, resuming gives equal bytes."""
     done = subprocess.run(
         [sys.executable, str(CHILD), str(kept[0]), str(tmp_path), what], capture_output=True, text=True, check=False
     )

@@ -72,6 +72,24 @@ def test_ome_zarr_validates(kept):
     assert ("z", "y", "x") == group["0"].metadata.dimension_names
 
 
+def test_channel_names_reach_viewers(tmp_path):
+    """Names of channels stand where viewers of OME-Zarr look for them, with a window that shows something."""
+    tifffile = pytest.importorskip("tifffile")
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        from ome_zarr_models.v05 import Image
+    stack = np.random.default_rng(0).integers(100, 900, (2, 40, 50), dtype=np.uint16)
+    tifffile.imwrite(tmp_path / "a.ome.tif", stack, metadata={"axes": "CYX", "Channel": {"Name": ["nuclei", "actin"]}})
+    report = stackbound.compress(tmp_path / "a.ome.tif", tmp_path / "s", tolerance=3)
+    group = zarr.open_group(report.store, mode="r")
+    channels = group.attrs["ome"]["omero"]["channels"]
+
+    assert Image.from_zarr(group).ome_attributes.omero is not None
+    assert ["nuclei", "actin"] == [channel["label"] for channel in channels]
+    assert {"min": 0, "max": 65535, "start": stack.min(), "end": stack.max()} == channels[0]["window"]
+    assert ("nuclei", "actin") == stackbound.open(report.store).channel_names
+
+
 def test_a_patch_decodes_only_its_tiles(kept, monkeypatch):
     """Reading a patch decodes the tiles that it touches and no others."""
     decoded = []

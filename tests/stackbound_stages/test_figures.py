@@ -69,3 +69,51 @@ def test_text_reads_back():
 
     assert repr(1 / 3) == figure("mean-error", original, decoded)
     assert repr(math.sqrt(1 / 3)) == figure("rmse", original, decoded)
+
+
+def test_changed_share():
+    """The share counts bits: a negative zero that became positive is a change."""
+    assert "0.25" == figure("changed-share", np.array([[1, 2], [3, 4]], "u1"), np.array([[1, 2], [3, 5]], "u1"))
+    assert "0.5" == figure("changed-share", np.array([[-0.0, 1.0]], "f4"), np.array([[0.0, 1.0]], "f4"))
+
+
+def test_ssim():
+    """Structural similarity is that of scikit-image, averaged over planes; it is 1 without change."""
+    metrics = pytest.importorskip("skimage.metrics")
+    rng = np.random.default_rng(6)
+    original = rng.normal(1000, 200, (3, 40, 50)).astype("u2")
+    decoded = (original + rng.integers(-60, 61, original.shape)).astype("u2")
+    expected = [
+        metrics.structural_similarity(o, d, data_range=int(o.max()) - int(o.min()), win_size=7)
+        for o, d in zip(original, decoded, strict=True)
+    ]
+
+    assert np.mean(expected) == pytest.approx(float(figure("ssim", original, decoded)), abs=1e-8)
+    assert figure("ssim", original, decoded) == figure("ssim", original, decoded, regions=3)
+    assert "1" == figure("ssim", original, original)
+    assert "nan" == figure("ssim", original[:, :5], decoded[:, :5])
+
+
+def test_ssim_of_planes_that_are_not_finite():
+    """Planes with NaN that changed do not count; those that did not are equal."""
+    pytest.importorskip("skimage.metrics")
+    stack = np.ones((2, 9, 9), "f4")
+    stack[0, 0, 0] = np.nan
+    changed = stack.copy()
+    changed[:, 5, 5] = 2
+
+    assert "1" == figure("ssim", stack, stack)
+    assert 0 < float(figure("ssim", stack, changed)) < 1
+
+
+def test_ssim_without_its_library(monkeypatch):
+    """Where scikit-image is missing, the configuration is refused before anything is read."""
+    import importlib.util
+
+    from stackbound.config import build, read_config
+    from stackbound.errors import ConfigError
+
+    real = importlib.util.find_spec
+    monkeypatch.setattr(importlib.util, "find_spec", lambda name, *a: None if name == "skimage" else real(name, *a))
+    with pytest.raises(ConfigError, match="scikit-image"):
+        build(read_config({"verify": {"figures": ["ssim"]}}, tolerance=1))
