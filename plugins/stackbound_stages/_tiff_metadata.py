@@ -93,7 +93,7 @@ def _attributes(tiff: tifffile.TiffFile, page: tifffile.TiffPage, kind: str, sto
         "axes": stored,
         "byteorder": "big" if tiff.byteorder == ">" else "little",
         "bigtiff": bool(tiff.is_bigtiff),
-        "photometric": int(page.photometric),
+        "photometric": _read_photometric(page),
         "planar": int(page.planarconfig or 1) == 2,
         "samples": int(page.samplesperpixel),
     }
@@ -106,6 +106,12 @@ def _attributes(tiff: tifffile.TiffFile, page: tifffile.TiffPage, kind: str, sto
     if page.colormap is not None and page.colormap.shape[-1] <= 256:
         found["colormap"] = page.colormap.astype(int).tolist()
     return found
+
+
+def _read_photometric(page: tifffile.TiffPage) -> int:
+    """Return the meaning of the pixels as they are read: the decoders of JPEG give RGB (2) for YCbCr (6)."""
+    photometric = int(page.photometric)
+    return 2 if photometric == 6 and int(page.compression) in _LOSSY else photometric
 
 
 def _headers(tiff: tifffile.TiffFile, page: tifffile.TiffPage) -> dict[str, bytes]:

@@ -152,7 +152,8 @@ def check_complete(tiff: tifffile.TiffFile, series: tifffile.TiffPageSeries, tab
         found = planes if series.kind == "imagej" else len(table.pages)
         if found < promised:
             raise SourceError(f"{found} of {promised} planes are in the file", where=name, remedy=CUT)
-    used = {page.offset for one in tiff.series for page in one.pages if page is not None}
+    levels = [level for one in tiff.series for level in one.levels]
+    used = {page.offset for level in levels for page in level.pages if page is not None}
     rest = [page for page in table.pages if page.offset not in used and not page.field(254) & 1]
     if rest and planes == len(series.pages):
         raise SourceError(

@@ -105,9 +105,9 @@ def _colour(attributes: Mapping[str, Any], letters: str, shape: tuple[int, ...])
         planar = {"planarconfig": "contig" if letters.endswith(SAMPLES) else "separate"}
         extra = attributes.get("extrasamples")
         alpha = {"extrasamples": extra} if extra and photometric in (1, 2, 5) else {}
-        if samples >= {2: 3, 5: 4}.get(photometric, samples + 1):
+        if samples >= {2: 3, 5: 4, 6: 3, 8: 3}.get(photometric, samples + 1):
             return planar | alpha | {"photometric": photometric}
-        # YCbCr was turned into RGB on reading; anything else is samples without a meaning that tifffile writes.
+        # Samples without a meaning that tifffile writes.
         return planar | {"photometric": 2 if samples in (3, 4) else 1}
     if photometric == 3 and "colormap" in attributes:
         return {"photometric": 3, "colormap": np.array(attributes["colormap"], np.uint16)}

@@ -213,6 +213,18 @@ def test_colour_tables_white_zero_and_private_fields_stay(tmp_path: Path) -> Non
         assert 3 == page.tags[274].value
 
 
+@pytest.mark.parametrize("photometric", ["ycbcr", "separated", "cielab"])
+def test_other_colour_spaces_stay(tmp_path: Path, photometric: str) -> None:
+    """Samples of other colour spaces are kept as stored and labelled as they were."""
+    samples = np.dstack([RGB, RGB[..., :1]]) if photometric == "separated" else RGB
+    tifffile.imwrite(tmp_path / "a.tif", samples, photometric=photometric)
+
+    saved_again(TiffSave(), tmp_path / "a.tif", tmp_path / "b.tif")
+
+    with tifffile.TiffFile(tmp_path / "a.tif") as old, tifffile.TiffFile(tmp_path / "b.tif") as new:
+        assert old.pages.first.photometric == new.pages.first.photometric
+
+
 # --------------------------------------------------------------------------------------------------------- OME-TIFF
 
 

@@ -361,6 +361,30 @@ def test_a_pyramid_gives_its_full_resolution(tmp_path: Path) -> None:
     assert any("smaller levels are left out" in note for note in info.notes)
 
 
+def test_levels_and_thumbnails_that_are_pages(tmp_path: Path) -> None:
+    """Smaller copies that stand among the pages are left out, and the user is told."""
+    for number, step in enumerate((1, 2, 4)):
+        tifffile.imwrite(tmp_path / "p.tif", RGB[:32:step, ::step], metadata=None, append=number > 0)
+    tifffile.imwrite(tmp_path / "t.tif", PLANES[0], metadata=None)
+    tifffile.imwrite(tmp_path / "t.tif", PLANES[0, ::5, ::5], metadata=None, append=True, subfiletype=1)
+
+    for name, expected in (("p.tif", RGB[:32].transpose(2, 0, 1)), ("t.tif", PLANES[0])):
+        info, pixels = loaded(tmp_path / name)
+        assert np.array_equal(expected, pixels)
+        assert any("left out" in note for note in info.notes)
+
+
+def test_jpeg_is_read_as_rgb_with_a_note(tmp_path: Path) -> None:
+    """JPEG in TIFF is read as RGB; the user is told that it had lost something before."""
+    tifffile.imwrite(tmp_path / "a.tif", RGB, photometric="rgb", compression="jpeg", tile=(16, 16))
+
+    info, pixels = loaded(tmp_path / "a.tif")
+
+    assert np.array_equal(tifffile.imread(tmp_path / "a.tif").transpose(2, 0, 1), pixels)
+    assert any("JPEG" in note and "lossy" in note for note in info.notes)
+    assert 2 == info.attributes["photometric"]
+
+
 @pytest.mark.parametrize(
     ("array", "said"),
     [(PLANES[0] > 100, "one-bit"), (PLANES[0].astype(np.complex64), "complex")],
