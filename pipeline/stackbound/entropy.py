@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from math import prod
 from typing import Any
 
 import numpy as np
@@ -12,7 +13,7 @@ from stackbound.kernels import coefficients, golomb, neighbourclass, rans, sprea
 from stackbound.kernels.frequencies import scan
 
 TABLES = spread.DIRECT
-SPARE = np.zeros(rans.STATES, np.uint16)
+HIGHEST_BAND_CLASS = spread.TOP - len(coefficients.RATIOS)
 
 
 def encode_residuals(residuals: NDArray[np.int32]) -> bytes:
@@ -39,7 +40,7 @@ def encode_residuals(residuals: NDArray[np.int32]) -> bytes:
     low_bits, far = np.zeros(-(-bits // 8), np.uint8), np.empty(listed, np.int64)
     if bits or listed:
         spread.split_rest(residuals, classes, low_bits, far)
-    group, frequencies = _write_tables(writer, histogram)
+    group, frequencies = write_tables(writer, histogram)
     _write_words(writer, rans.encode_runs, symbols, _grouped(run_tables, group), nx, frequencies)
     writer.sized(low_bits.tobytes())
     write_numbers(writer, far)
@@ -53,8 +54,8 @@ def decode_residuals(reader: Reader, shape: tuple[int, int, int]) -> NDArray[np.
         return np.zeros(shape, np.int32)
     classes = np.empty((nz, -(-ny // spread.CELL), -(-nx // spread.CELL)), np.uint8)
     _read_classes(reader, classes)
-    group, slots = _read_tables(reader)
-    words, states = _read_words(reader)
+    group, slots = read_tables(reader)
+    words, states = read_words(reader)
     out = np.empty((nz * ny, nx), np.int32)
     run_tables = np.empty((nz * ny, classes.shape[2]), np.uint8)
     spread.run_tables(classes, group, ny, run_tables)
@@ -84,28 +85,33 @@ def encode_indices(indices: NDArray[np.int32], block: tuple[int, int, int], grid
         Blocks along z, y and x.
     """
     order = scan(block)
-    blocks = grid[0] * grid[1] * grid[2]
-    work = np.array(indices[:, :blocks], np.int32, order="C")
-    plane = work[0].reshape(grid).copy()
-    coefficients.median_predict(plane, work[0].reshape(grid))
-    bands = int(order.bands[-1]) + 1
-    classes = np.empty(bands, np.int64)
-    coefficients.band_means(work, order.order, order.bands, blocks, classes)
+    work = np.array(indices[:, : prod(grid)], np.int32, order="C")
+    coefficients.median_predict(work[0].reshape(grid).copy(), work[0].reshape(grid))
     writer = Writer()
-    _write_bits(writer, np.diff(classes, prepend=0))
-    size = int(np.count_nonzero(classes[order.bands])) * (-(-blocks // 8) * 8)
-    symbols, tabs = np.empty(size, np.uint8), np.empty(size, np.uint8)
+    last = np.empty(prod(grid), np.uint8)
+    coefficients.last_bands(work, order.order, order.bands, last.size, last)
+    if not last.any():
+        writer.number(0)
+        return bytes(writer.data)
+    writer.number(1)
+    _write_classes(writer, last.reshape(grid))
+    classes = np.empty(int(order.bands[-1]) + 1, np.int64)
+    coefficients.band_means(work, order.order, order.bands, last, classes)
+    write_numbers(writer, np.diff(classes[: last.max()], prepend=0))
+    reached = (last[:, None] > np.arange(len(classes))).sum(0)
+    sizes = (-(-reached // 8) * 8)[order.bands]
+    symbols, tabs = np.empty(int(sizes.sum()), np.uint8), np.empty(int(sizes.sum()), np.uint8)
     histogram = np.zeros((TABLES, tables.SYMBOLS), np.uint32)
     # The most low bits that the classes above each band's allow.
     tops = np.maximum(classes + len(coefficients.RATIOS) - coefficients.BELOW - spread.DIRECT + 1, 0) // 2
-    low_bits = np.zeros(int((tops[order.bands] * blocks).sum()) // 8 + 1, np.uint8)
-    listed = np.empty(size, np.int64)
-    _, bits, far = coefficients.split_indices(
-        work, order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes), grid[1],
-        grid[2], blocks, symbols, tabs, histogram, low_bits, listed,
+    low_bits = np.zeros(int((tops[order.bands] * sizes).sum()) // 8 + 1, np.uint8)
+    listed = np.empty(symbols.size, np.int64)
+    size, bits, far = coefficients.split_indices(
+        work, order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes),
+        np.array(grid), last, symbols, tabs, histogram, low_bits, listed,
     )  # fmt: skip
-    group, frequencies = _write_tables(writer, histogram)
-    _write_words(writer, rans.encode, symbols, _grouped(tabs, group), rans.STATES, frequencies)
+    group, frequencies = write_tables(writer, histogram)
+    _write_words(writer, rans.encode, symbols[:size], _grouped(tabs[:size], group), rans.STATES, frequencies)
     writer.sized(low_bits[: -(-bits // 8)].tobytes())
     write_numbers(writer, listed[:far])
     return bytes(writer.data)
@@ -114,18 +120,26 @@ def encode_indices(indices: NDArray[np.int32], block: tuple[int, int, int], grid
 def decode_indices(reader: Reader, block: tuple[int, int, int], grid: tuple[int, int, int]) -> NDArray[np.int32]:
     """Return the indices of a tile, shape (bz*by*bx, blocks)."""
     order = scan(block)
-    blocks = grid[0] * grid[1] * grid[2]
-    classes = np.cumsum(_read_bits(reader, int(order.bands[-1]) + 1))
-    if classes.min() < 0 or classes.max() > spread.TOP - len(coefficients.RATIOS):
+    indices = np.zeros((len(order.order), prod(grid)), np.int32)
+    if reader.number(1) == 0:
+        return indices
+    last = np.empty(prod(grid), np.uint8)
+    _read_classes(reader, last.reshape(grid))
+    bands = int(order.bands[-1]) + 1
+    if last.max() > bands:
+        raise damaged("a block has too many bands")
+    classes = np.zeros(bands, np.int64)
+    given = np.cumsum(read_numbers(reader, bands))
+    if len(given) != last.max() or given.min(initial=0) < 0 or given.max(initial=0) > HIGHEST_BAND_CLASS:
         raise damaged("a band has an impossible class")
-    group, slots = _read_tables(reader)
-    words, states = _read_words(reader)
+    classes[: len(given)] = given
+    group, slots = read_tables(reader)
+    words, states = read_words(reader)
     low_bits = np.frombuffer(reader.sized(), np.uint8)
-    listed = read_numbers(reader, len(order.order) * blocks)
-    indices = np.empty((len(order.order), blocks), np.int32)
+    listed = read_numbers(reader, indices.size)
     wrong = coefficients.join_indices(
-        order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes), grid[1], grid[2],
-        blocks, group, slots, words, states, low_bits, listed, indices,
+        order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes), np.array(grid),
+        last, group, slots, words, states, low_bits, listed, indices,
     )  # fmt: skip
     if wrong or np.any(states != rans.LOW):
         raise damaged("the range coder does not end where it should")
@@ -155,7 +169,7 @@ def _write_classes(writer: Writer, classes: NDArray[np.uint8]) -> None:
     neighbourclass.split(classes, symbols, contexts)
     histogram = np.zeros((neighbourclass.CONTEXTS, tables.SYMBOLS), np.uint32)
     np.add.at(histogram, (contexts, symbols), 1)
-    group, frequencies = _write_tables(writer, histogram)
+    group, frequencies = write_tables(writer, histogram)
     padded = np.full(-(-classes.size // 8) * 8, rans.SKIP, np.uint8)
     padded[: classes.size] = group[contexts]
     symbols = np.resize(symbols, padded.size)
@@ -163,14 +177,14 @@ def _write_classes(writer: Writer, classes: NDArray[np.uint8]) -> None:
 
 
 def _read_classes(reader: Reader, classes: NDArray[np.uint8]) -> None:
-    group, slots = _read_tables(reader, neighbourclass.CONTEXTS)
-    words, states = _read_words(reader, 1)
+    group, slots = read_tables(reader, neighbourclass.CONTEXTS)
+    words, states = read_words(reader, 1)
     used = neighbourclass.decode(group, slots, words, states, classes)
     if used != words.size - rans.STATES or states[0] != rans.LOW:
         raise damaged("the classes do not end where they should")
 
 
-def _write_tables(writer: Writer, histogram: NDArray[np.uint32]) -> tuple[NDArray[np.uint8], NDArray[np.int64]]:
+def write_tables(writer: Writer, histogram: NDArray[np.uint32]) -> tuple[NDArray[np.uint8], NDArray[np.int64]]:
     """Write the tables for a histogram; return the group of each table and the frequencies of each group."""
     group = np.zeros(len(histogram), np.uint8)
     groups = tables.share(histogram, group, tables.FRACTIONS)
@@ -184,7 +198,7 @@ def _write_tables(writer: Writer, histogram: NDArray[np.uint32]) -> tuple[NDArra
     return group, frequencies
 
 
-def _read_tables(reader: Reader, count: int = TABLES) -> tuple[NDArray[np.uint8], NDArray[np.uint32]]:
+def read_tables(reader: Reader, count: int = TABLES) -> tuple[NDArray[np.uint8], NDArray[np.uint32]]:
     """Return the group of each table and the decoding slots of each group."""
     groups = reader.number(count)
     starts = np.frombuffer(reader.take(-(-count // 8)), np.uint8)
@@ -214,13 +228,14 @@ def _write_words(
     writer.sized(words[begin:].astype("<u2").tobytes())
 
 
-def _read_words(reader: Reader, states: int = rans.STATES) -> tuple[NDArray[np.uint16], NDArray[np.uint32]]:
+def read_words(reader: Reader, states: int = rans.STATES) -> tuple[NDArray[np.uint16], NDArray[np.uint32]]:
     """Return the words with spare ones at the end, and the states."""
     initial = np.frombuffer(reader.take(4 * states), "<u4").astype(np.uint32)
     data = reader.sized()
     if len(data) % 2:
         raise damaged("half a word")
-    return np.concatenate([np.frombuffer(data, "<u2").astype(np.uint16), SPARE]), initial
+    spare = np.zeros(max(states, rans.STATES), np.uint16)
+    return np.concatenate([np.frombuffer(data, "<u2").astype(np.uint16), spare]), initial
 
 
 def write_numbers(writer: Writer, numbers: NDArray[np.int64]) -> None:

@@ -40,4 +40,37 @@ class BlockPrediction:
     indices: NDArray[Any]
 
 
-Prediction = NoPrediction | BlockPrediction
+@dataclass(frozen=True)
+class NeighbourPrediction:
+    """What decoded neighbours say of each pixel, on top of a base: a weighted sum of (decoded - base) around it.
+
+    Used where the tile has one tolerance, the coder is "rans" and `stackbound.neighbours.possible` holds; elsewhere the
+    base predicts alone.
+
+    Attributes
+    ----------
+    base : NoPrediction or BlockPrediction
+        Without a transform the base is the mean of each plane.
+    taps : ndarray of int64, shape (n, 3)
+        (plane, row, column) of each neighbour relative to the pixel, in a row above or the plane before; n is a multiple
+        of 8.
+    weights : ndarray of int32, shape (4, n)
+        Weights in units of 2**-12: for the first row and the other rows of the bands of the first plane, then the same
+        for later planes.
+    left : ndarray of int32, shape (4, 3)
+        Weights of the three pixels to the left.
+    alone : bool
+        Whether the expected size of a residual is judged without the plane before.
+    clamped : bool
+        Whether a prediction stays between the smallest and largest of its four nearest neighbours.
+    """
+
+    base: NoPrediction | BlockPrediction
+    taps: NDArray[np.int64]
+    weights: NDArray[np.int32]
+    left: NDArray[np.int32]
+    alone: bool = False
+    clamped: bool = False
+
+
+Prediction = NoPrediction | BlockPrediction | NeighbourPrediction

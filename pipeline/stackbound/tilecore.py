@@ -8,18 +8,18 @@ from math import prod
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound import entropy, zstdcoder
+from stackbound import entropy, neighbours, zstdcoder
 from stackbound.byteio import Reader, Writer, damaged
 from stackbound.errors import PluginError
 from stackbound.kernels import bound, inverse
 from stackbound.kernels.basis import COEFFICIENT_LIMIT, LENGTHS, cosine, widest
 from stackbound.kernels.blocks import counts
 from stackbound.lattice import LatticeTile, Part
-from stackbound.prediction import BlockPrediction, NoPrediction, Prediction
+from stackbound.prediction import BlockPrediction, NeighbourPrediction, NoPrediction, Prediction
 from stackbound.stages import Encode
 
 CODERS = ("rans", "zstd")
-NO_PREDICTION, BLOCKS = 0, 1
+NO_PREDICTION, BLOCKS, NEIGHBOURS, NEIGHBOURS_ON_BLOCKS = 0, 1, 2, 3
 COSINE, MATRIX = 0, 1
 INDEX_LIMIT = 2**28
 """Differences of three of them fit 32 bits."""
@@ -55,16 +55,25 @@ def encode(tile: LatticeTile, prediction: Prediction, stage: Encode) -> Parts:
     writer = Writer()
     writer.number(CODERS.index(stage.coder))
     indices = b""
+    around: NeighbourPrediction | None = None
+    if isinstance(prediction, NeighbourPrediction):
+        if not plain and tile.tolerances is None and neighbours.possible(tile.span, tile.values.shape[1]):
+            around = prediction
+        prediction = prediction.base
     if isinstance(prediction, BlockPrediction):
         checked = check(prediction, tile)
+        writer.number(BLOCKS if around is None else NEIGHBOURS_ON_BLOCKS)
         _write_prediction(writer, checked)
         grid = counts(tile.values.shape, checked.block)
         flat = checked.indices.reshape(prod(checked.block), -1)
         indices = zstdcoder.encode(flat, stage.effort) if plain else entropy.encode_indices(flat, checked.block, grid)
         predicted = form(checked, tile.values.shape, tile.span)
     else:
-        writer.number(NO_PREDICTION)
-        predicted = form(prediction, tile.values.shape, tile.span)
+        writer.number(NO_PREDICTION if around is None else NEIGHBOURS)
+        predicted = neighbours.NOTHING if around is not None else form(prediction, tile.values.shape, tile.span)
+    if around is not None:
+        coded, decoded = neighbours.encode(tile.values, predicted, around, tile.tolerance, tile.span)
+        return Parts(bytes(writer.data), indices, coded, decoded)
     residuals = np.empty_like(predicted)
     if tile.tolerances is None:
         bound.residual(tile.values, predicted, 2 * tile.tolerance + 1, residuals)
@@ -78,11 +87,17 @@ def encode(tile: LatticeTile, prediction: Prediction, stage: Encode) -> Parts:
 def decode(reader: Reader, shape: tuple[int, int, int], part: Part) -> NDArray[np.int32]:
     """Return the lattice values of a tile (nz, ny, nx)."""
     plain = CODERS[reader.number(len(CODERS) - 1)] == "zstd"
-    kind = reader.number(BLOCKS)
-    prediction: Prediction = NoPrediction()
-    if kind == BLOCKS:
-        prediction = _read_prediction(reader, shape, plain)
-    predicted = form(prediction, shape, part.span)
+    kind = reader.number(NEIGHBOURS_ON_BLOCKS)
+    if kind == NEIGHBOURS:
+        predicted = neighbours.NOTHING
+    elif kind == NO_PREDICTION:
+        predicted = form(NoPrediction(), shape, part.span)
+    else:
+        predicted = form(_read_prediction(reader, shape, plain), shape, part.span)
+    if kind >= NEIGHBOURS:
+        if plain or part.tolerances is not None:
+            raise damaged("neighbours with a coder or tolerances that do not go with them")
+        return neighbours.decode(reader, predicted, shape, part.tolerance, part.span)
     if plain:
         _pull(predicted, zstdcoder.decode(reader, prod(shape)).reshape(shape), part)
     else:
@@ -103,13 +118,15 @@ def describe(reader: Reader, span: int) -> dict[str, object]:
     if span == 0:
         return {"mode": "constant"}
     coder = CODERS[reader.number(len(CODERS) - 1)]
-    if reader.number(BLOCKS) == NO_PREDICTION:
-        return {"mode": "none", "coder": coder}
+    kind = reader.number(NEIGHBOURS_ON_BLOCKS)
+    if kind in (NO_PREDICTION, NEIGHBOURS):
+        return {"mode": "none" if kind == NO_PREDICTION else "neighbours", "coder": coder}
     block = [LENGTHS[reader.number(len(LENGTHS) - 1)] for _ in range(3)]
-    return {"mode": "transform", "block": block, "coder": coder}
+    mode = "transform" if kind == BLOCKS else "neighbours on transform"
+    return {"mode": mode, "block": block, "coder": coder}
 
 
-def form(prediction: Prediction, shape: tuple[int, int, int], span: int) -> NDArray[np.int32]:
+def form(prediction: NoPrediction | BlockPrediction, shape: tuple[int, int, int], span: int) -> NDArray[np.int32]:
     """Return the integer prediction that every decoder forms from the numbers of a prediction."""
     if isinstance(prediction, NoPrediction):
         return np.full(shape, (span + 1) // 2, np.int32)
@@ -161,7 +178,6 @@ def exact(block: tuple[int, ...], bases: tuple[str | NDArray[np.int64], ...]) ->
 
 
 def _write_prediction(writer: Writer, prediction: BlockPrediction) -> None:
-    writer.number(BLOCKS)
     for side in prediction.block:
         writer.number(side.bit_length() - 1)
     for side, base in zip(prediction.block, prediction.bases, strict=True):
