@@ -13,6 +13,7 @@ from .environment import format_size
 if TYPE_CHECKING:
     from ._batch import Outcome, Result
     from .reports import CompressReport, RestoreReport, VerifyReport
+    from .testing import Findings
 
 _WIDTH = 100
 _LABEL = 12
@@ -128,6 +129,14 @@ def plugins(facts: Mapping[str, Any]) -> str:
         for failure in facts["failures"]:
             lines.append(f"  {failure['distribution']} {failure['version']} ({failure['plugin']}): {failure['reason']}")
     return "\n".join(lines)
+
+
+def findings(result: Findings) -> str:
+    """Return the outcome of the conformance suite for one stage."""
+    rows = [("checked", ", ".join(result.checks))]
+    rows += [("finding", str(finding)) for finding in result.findings]
+    verdict = "keeps its contract" if result.ok else "BREAKS ITS CONTRACT"
+    return _block(f"{result.stage}: {verdict}", [*rows, *_notes(result.notes)])
 
 
 def inspect(facts: Mapping[str, Any]) -> str:

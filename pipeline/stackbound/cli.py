@@ -204,6 +204,42 @@ def demo(folder: str) -> int:
     return 0
 
 
+@cli.command("new-plugin", short_help="Write a plugin project, ready to install.")
+@click.argument("kind", metavar="KIND")
+@click.argument("name", metavar="NAME")
+def new_plugin(kind: str, name: str) -> int:
+    """Write a plugin project with one stage of KIND into a new folder NAME, with a test that passes.
+
+    KIND is load, tile, transform, quantize, predict, encode, verify or save.
+    """
+    from .newplugin import new_plugin as write
+
+    folder = write(kind, name)
+    click.echo(f"{folder}: a project with the {kind} stage '{name}'. Next: pip install ./{folder}")
+    return 0
+
+
+@cli.command("check-plugin", short_help="Check that stages keep the contract of their kind.")
+@click.argument("plugin", metavar="FILE|NAME")
+@click.option("--example", metavar="FILE", help="For a load stage: a file that it can read.")
+@_JSON
+def check_plugin(plugin: str, *, as_json: bool, example: str | None) -> int:
+    """Run the conformance suite on the stages of a plugin file, a distribution, or one stage by its name.
+
+    Each finding says what is wrong and how to mend it; any finding ends with exit code 2.
+    """
+    from .plugins import stages_of
+    from .testing import check_stage
+
+    results = [_work(check_stage, cls, example=example) for cls in _work(stages_of, plugin)]
+    _print(
+        lambda: {"schema_version": 1, "stages": [result.to_json() for result in results]},
+        lambda: "\n".join(_text().findings(result) for result in results),
+        as_json,
+    )
+    return 0 if all(result.ok for result in results) else 2
+
+
 def _work(function: Callable[..., Any], *args: Any, **options: Any) -> Any:
     """Call `function`; what plugins print meanwhile goes to standard error, which leaves results alone on output."""
     with contextlib.redirect_stdout(sys.stderr):

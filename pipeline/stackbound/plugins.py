@@ -7,6 +7,7 @@ or, in every process that inherits it, by the environment variable STACKBOUND_PL
 from __future__ import annotations
 
 import contextlib
+import difflib
 import hashlib
 import importlib
 import importlib.metadata
@@ -20,8 +21,9 @@ from types import ModuleType
 
 from .errors import PluginError, UsageError
 from .registry import GROUP, KINDS, Failure, Origin, Registry, hookimpl
+from .stages import Stage
 
-__all__ = ["KINDS", "Failure", "Origin", "Registry", "hookimpl", "plugin_report", "registry", "use_plugin"]
+__all__ = ["KINDS", "Failure", "Origin", "Registry", "hookimpl", "plugin_report", "registry", "stages_of", "use_plugin"]
 
 SWITCH = "STACKBOUND_PLUGINS"
 """Environment variable: ``off`` runs without third-party plugins."""
@@ -197,3 +199,37 @@ def plugin_report(source: Registry | None = None) -> dict[str, object]:
         for failure in source.failures
     ]
     return {"schema_version": 1, "stages": loaded, "failures": failed, "third_party": third_party_allowed()}
+
+
+def stages_of(what: str) -> list[type[Stage]]:
+    """Return the stage classes that a file, a distribution or a stage's name means.
+
+    Raises
+    ------
+    stackbound.errors.PluginError
+        The file or distribution failed to load.
+    stackbound.errors.UsageError
+        Nothing of that name is there.
+    """
+    path = Path(what)
+    if path.suffix == ".py" or path.is_file():
+        use_plugin(path)
+    found = registry()
+    every = [cls for kind in KINDS for cls in found.classes(kind)]
+    chosen = [
+        cls
+        for cls in every
+        if what in (cls.name, f"{cls.kind}:{cls.name}", found.origin(cls).distribution)
+        or found.origin(cls).file == path.absolute()
+    ]
+    if chosen:
+        return chosen
+    broken = [failure for failure in found.failures if what in (failure.origin.distribution, failure.plugin)]
+    if broken:
+        raise PluginError("; ".join(failure.reason for failure in broken) + ".", where=what)
+    names = {found.origin(cls).distribution for cls in every} | {cls.name for cls in every}
+    near = difflib.get_close_matches(what, sorted(names), n=1)
+    hint = f"; did you mean '{near[0]}'?" if near else "."
+    raise UsageError(
+        f"There is no plugin file, distribution or stage '{what}'{hint}", remedy="See 'stackbound plugins'."
+    )

@@ -22,7 +22,18 @@ from . import stages
 from .errors import ConfigError, PluginError
 from .stages import Options, Stage
 
-__all__ = ["CONTRACTS", "GROUP", "KINDS", "Failure", "Hooks", "Origin", "Registry", "hookimpl"]
+__all__ = [
+    "CONTRACTS",
+    "GROUP",
+    "KINDS",
+    "STAGE_NAME",
+    "Failure",
+    "Hooks",
+    "Origin",
+    "Registry",
+    "contract_problem",
+    "hookimpl",
+]
 
 GROUP = "stackbound"
 """Entry point group under which distributions offer plugins, and name of the hooks' project."""
@@ -31,7 +42,7 @@ _hookspec = pluggy.HookspecMarker(GROUP)
 hookimpl = pluggy.HookimplMarker(GROUP)
 """Marks a plugin's function as the implementation of the hook of the same name."""
 
-_STAGE_NAME = re.compile(r"[a-z][a-z0-9]*(-[a-z0-9]+)*")
+STAGE_NAME = re.compile(r"[a-z][a-z0-9]*(-[a-z0-9]+)*")
 
 CONTRACTS: dict[str, type[Stage]] = {
     cls.kind: cls
@@ -220,7 +231,7 @@ class Registry:
         return None
 
     def _add_stage(self, cls: object, plugin: str, origin: Origin) -> None:
-        problem = _contract_problem(cls)
+        problem = contract_problem(cls)
         if problem is not None or not isinstance(cls, type) or not issubclass(cls, Stage):
             self._fail(plugin, origin, problem or "is not a class")
             return
@@ -252,7 +263,7 @@ def _reason(error: BaseException) -> str:
     return f"{type(error).__name__}: {text}" if text else type(error).__name__
 
 
-def _contract_problem(cls: object) -> str | None:
+def contract_problem(cls: object) -> str | None:
     """Return what keeps `cls` from being a stage class, or None."""
     if not (isinstance(cls, type) and issubclass(cls, Stage)):
         return f"{cls!r} is not a stage class: it must derive from one of stackbound.stages"
@@ -261,7 +272,7 @@ def _contract_problem(cls: object) -> str | None:
     name: object = getattr(cls, "name", None)
     if not isinstance(kind, str) or kind not in CONTRACTS or not issubclass(cls, CONTRACTS[kind]):
         return f"{title} derives from no kind of stage; the kinds are: {', '.join(KINDS)}"
-    if not isinstance(name, str) or not _STAGE_NAME.fullmatch(name):
+    if not isinstance(name, str) or not STAGE_NAME.fullmatch(name):
         return f"{title} needs a 'name' of lower-case letters, digits and single hyphens, not {name!r}"
     if inspect.isabstract(cls):
         return f"{title} lacks the methods {', '.join(sorted(cls.__abstractmethods__))}"
