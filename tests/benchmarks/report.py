@@ -113,6 +113,49 @@ def floor_table(rows: Sequence[Measurement]) -> Iterable[str]:
         yield f"{stack[:30]:32}{coder:14}{'  '.join(cells)}"
 
 
+def markdown(rows: Sequence[Measurement], found: Sequence[dict[str, Any]], coder: str) -> Iterable[str]:
+    """Yield the figures of one coder as Markdown: every stack against the others, then the means."""
+    others = [name for name in dict.fromkeys(r.coder for r in rows) if name != coder]
+    yield (
+        "| stack | noise | tolerance | bits/px | "
+        + " | ".join(f"vs {name}" for name in others)
+        + (f" | encode vs {STANDARD} | decode vs {STANDARD} | planning |")
+    )
+    yield "|---|---|---|---|" + "---|" * (len(others) + 3)
+    by_place = {(r.stack, r.tolerance, r.coder): r for r in rows}
+    for r in (r for r in rows if r.coder == coder and not math.isnan(r.bits)):
+        beside = [by_place.get((r.stack, r.tolerance, name)) for name in others]
+        smaller = ["" if o is None or math.isnan(o.bits) else f"{o.bits / r.bits:.2f}" for o in beside]
+        s = by_place.get((r.stack, r.tolerance, STANDARD))
+        speeds = (
+            ["", ""]
+            if s is None or math.isnan(s.bits)
+            else [f"{r.encode / s.encode:.2f}", f"{r.decode / s.decode:.2f}"]
+        )
+        floor = "" if r.floor is None else f" ({r.bits - r.floor:+.3f})"
+        cells = [
+            r.stack,
+            f"{r.noise:.2f}",
+            f"{r.tolerance:g}",
+            f"{r.bits:.3f}{floor}",
+            *smaller,
+            *speeds,
+            f"{r.planning:.0%}",
+        ]
+        yield "| " + " | ".join(cells) + " |"
+    yield ""
+    yield f"| tolerance / noise | times smaller than {STANDARD} | worst | encode | worst | decode | worst | planning |"
+    yield "|---|---|---|---|---|---|---|---|"
+    for s in (s for s in found if s["coder"] == coder):
+        pairs = [
+            f"{s[key]:.2f} | {s[key + '_worst'][1]:.2f} {s[key + '_worst'][0]}"
+            for key in ("smaller", "encode_faster", "decode_faster")
+        ]
+        yield (
+            f"| {s['multiple']:g} | " + " | ".join(pairs) + f" | {s['planning_mean']:.0%} ({s['planning_most']:.0%}) |"
+        )
+
+
 def write_json(path: Path, rows: Sequence[Measurement], about: dict[str, Any], **more: Any) -> None:
     """Write everything that was measured."""
     content = {"schema_version": 1, "about": about, "measurements": [_without_nan(asdict(r)) for r in rows], **more}

@@ -2,7 +2,7 @@
 
     python tests/benchmarks/run.py FOLDER
 
-prints a table and ratios, and writes benchmark.json and benchmark.png into --out. Everything runs in turn in one
+prints a table and ratios, and writes benchmark.json, .md and .png into --out. Everything runs in turn in one
 process on one core. Times are CPU times, so other work on the machine disturbs them little; compare them only within
 one run.
 """
@@ -55,6 +55,8 @@ def main(arguments: list[str] | None = None) -> int:
         more["whole"] = json.loads((options.whole / "whole.json").read_text(encoding="utf-8"))
     about = about_this_run(options, core)
     report.write_json(options.out / "benchmark.json", rows, about, summary=found, **more)
+    text = "\n".join(report.markdown(rows, found, coders[0].name)) + "\n"
+    (options.out / "benchmark.md").write_text(text, encoding="utf-8", newline="\n")
     report.plot(options.out / "benchmark.png", rows)
     return code
 

@@ -159,6 +159,9 @@ def test_the_command_measures_a_folder(tmp_path: Path, capsys: pytest.CaptureFix
     assert {row["coder"] for row in content["measurements"]} == {"stackbound", "predict=none", "14495-1", "zstd-9"}
     assert "the standard's largest tolerance is 255" in printed
     assert all(row["largest_error"] <= row["tolerance"] for row in content["measurements"] if row["bits"])
+    table = (tmp_path / "out" / "benchmark.md").read_text(encoding="utf-8")
+    assert table.count("| one.ome.tif |") == 5
+    assert table.count("| two.ome.tif |") == 4
     assert (tmp_path / "out" / "benchmark.png").stat().st_size > 10_000
 
 
