@@ -21,7 +21,7 @@ from .errors import PluginError, StackboundError
 from .registry import CONTRACTS, Origin, Registry
 from .stages import Options, Stage
 
-__all__ = ["guarded", "make"]
+__all__ = ["guarded", "make", "same"]
 
 EVERY = 64
 """Every so many questions one is asked twice, the first too: answers that differ would make runs differ."""
@@ -100,7 +100,7 @@ def _watched(method: Callable[..., Any], title: str, repeatable: bool) -> Callab
         answer = _answer(method, title, self, args, keywords)
         if repeatable and next(asked) % EVERY == 0:
             again = _answer(method, title, self, args, keywords)
-            if not _same(answer, again):
+            if not same(answer, again):
                 what = f"The {title} answered differently when it was asked for '{method.__name__}' again."
                 raise PluginError(what, remedy="A stage may depend on its arguments and options alone.")
         return answer
@@ -143,7 +143,7 @@ def _shielded(value: Any) -> Any:
     return value
 
 
-def _same(one: Any, other: Any) -> bool:
+def same(one: Any, other: Any) -> bool:
     """Return whether two answers are equal, bit for bit in arrays."""
     if isinstance(one, np.ndarray) and isinstance(other, np.ndarray):
         return (one.shape, one.dtype, one.tobytes()) == (other.shape, other.dtype, other.tobytes())
@@ -151,11 +151,11 @@ def _same(one: Any, other: Any) -> bool:
         return False
     if dataclasses.is_dataclass(one):
         fields = dataclasses.fields(one)
-        return all(_same(getattr(one, field.name), getattr(other, field.name)) for field in fields)
+        return all(same(getattr(one, field.name), getattr(other, field.name)) for field in fields)
     if isinstance(one, Mapping):
-        return list(one) == list(other) and all(_same(one[key], other[key]) for key in one)
+        return list(one) == list(other) and all(same(one[key], other[key]) for key in one)
     if isinstance(one, list | tuple):
-        return len(one) == len(other) and all(map(_same, one, other))
+        return len(one) == len(other) and all(map(same, one, other))
     return bool(one == other) or pickle.dumps(one) == pickle.dumps(other)
 
 
