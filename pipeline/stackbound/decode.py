@@ -291,26 +291,30 @@ RATIOS = np.array([round(256 * (4 / 3 * 2 ** (j / 2) - 1 / 3)) for j in range(-3
 
 def read_indices(reader: Reader, block: tuple[int, int, int], grid: tuple[int, int, int]) -> NDArray[np.int64]:
     """Return the indices, shape (*block, *grid)."""
+    indices = np.zeros((*block, *grid), np.int64)
+    if reader.number(1) == 0:
+        return indices
     order, bands = scan(block)
-    band_classes = np.cumsum(golomb(reader.sized(), bands[-1] + 1)).tolist()
-    if min(band_classes) < 0 or max(band_classes) > 88:
-        raise DamagedError("a band has an impossible class")
+    # How many bands each block reaches; what lies beyond is zero and not coded.
+    last = read_classes(reader, grid)
+    given = reader.number(bands[-1] + 1)
+    band_classes = np.cumsum(golomb(reader.sized(), given)).tolist() if given else []
+    if given != last.max() or min(band_classes, default=0) < 0 or max(band_classes, default=0) > 88:
+        raise DamagedError("the bands make no sense")
+    band_classes += [0] * (bands[-1] + 1 - given)
     group, slots = read_tables(reader, 33)
     coder = Coder(reader, 8)
     rest = Rest(reader, prod(block) * prod(grid))
     mean = {place: _mean_of(band_classes[band]) for place, band in zip(order, bands)}
-    indices = np.zeros((*block, *grid), np.int64)
     for place, band in zip(order, bands):
         base = band_classes[band]
-        if base == 0:
+        active = last > band
+        if base == 0 or not active.any():
             continue
         near = [(tuple(np.subtract(place, lower)), weight) for lower, weight in NEIGHBOURS if _inside(place, lower)]
-        classes = _classes(near, base, mean, indices).ravel().tolist()
-        plane = []
-        for start in range(0, len(classes), 8):
-            part = [coder.symbol(k, slots[group[table_of(c)]]) for k, c in enumerate(classes[start : start + 8])]
-            plane += part
-        indices[place] = np.array([rest.number(s, shift_of(c)) for s, c in zip(plane, classes)]).reshape(grid)
+        classes = _classes(near, base, mean, indices)[active].tolist()
+        symbols = [coder.symbol(i % 8, slots[group[table_of(c)]]) for i, c in enumerate(classes)]
+        indices[place][active] = [rest.number(s, shift_of(c)) for s, c in zip(symbols, classes)]
     coder.end()
     rest.end()
     _restore_means(indices[0, 0, 0])

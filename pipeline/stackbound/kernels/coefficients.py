@@ -10,7 +10,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound.kernels.jit import inlined, kernel
+from stackbound.kernels.jit import Array, inlined, kernel
 from stackbound.kernels.spread import class_of, shift_of, table_of
 
 MAGNITUDE_LIMIT = 4095
@@ -55,38 +55,36 @@ def _median(plane: NDArray[np.int32], z: int, y: int, x: int) -> int:
 
 
 @kernel
-def band_means(
-    indices: NDArray[np.int32],
-    order: NDArray[np.int64],
-    bands: NDArray[np.int64],
-    blocks: int,
-    classes: NDArray[np.int64],
-) -> None:
-    """Write the class of each band's mean magnitude over the first `blocks` blocks."""
+def last_bands(indices: Array, order: Array, bands: Array, blocks: int, last: Array) -> None:
+    """Write how many bands of each block there are up to its last index that is not zero."""
+    for block in range(blocks):
+        last[block] = 0
+    for place in range(order.size):
+        row = indices[order[place]]
+        for block in range(blocks):
+            if row[block] != 0:
+                last[block] = bands[place] + 1
+
+
+@kernel
+def band_means(indices: Array, order: Array, bands: Array, last: Array, classes: Array) -> None:
+    """Write the class of each band's mean magnitude over the blocks that reach the band."""
     place = 0
     while place < order.size:
         band, total, number = bands[place], 0, 0
         while place < order.size and bands[place] == band:
             row = indices[order[place]]
-            for block in range(blocks):
-                total += abs(np.int64(row[block]))
-            number += blocks
+            for block in range(last.size):
+                if last[block] > band:
+                    total += abs(np.int64(row[block]))
+                    number += 1
             place += 1
-        # The mean in units of 2**-12; a total below 2**43 does not overflow.
-        classes[band] = max(class_of((min(total, 1 << 46) << 12) // number), 1 if total else 0)
+        # The mean in units of 2**-12; a total below 2**46 does not overflow.
+        classes[band] = max(class_of((min(total, 1 << 46) << 12) // max(number, 1)), 1 if total else 0)
 
 
 @inlined
-def thresholds(expected: int, out: NDArray[np.int64]) -> None:
-    """Write from which activity on an index belongs to the next class; `expected` in units of 2**-12."""
-    for j in range(RATIOS.size):
-        out[j] = (expected * RATIOS[j]) >> 20
-
-
-@inlined
-def expected_activity(
-    place: int, neighbours: NDArray[np.int64], weights: NDArray[np.int64], means: NDArray[np.int64]
-) -> int:
+def expected_activity(place: int, neighbours: Array, weights: Array, means: Array) -> int:
     """Return the activity that the bands' means let expect, in units of 2**-12."""
     total = 0
     for n in range(neighbours.shape[1]):
@@ -95,18 +93,43 @@ def expected_activity(
 
 
 @inlined
-def activity(
+def select(last: Array, band: int, active: Array) -> int:
+    """Write the blocks that reach a band to `active` and return how many they are."""
+    count = 0
+    for block in range(last.size):
+        active[count] = block
+        count += 1 if last[block] > band else 0
+    return count
+
+
+@inlined
+def classify(
     place: int,
-    neighbours: NDArray[np.int64],
-    weights: NDArray[np.int64],
-    magnitudes: NDArray[np.uint16],
-    down: int,
-    across: int,
-    blocks: int,
-    own: NDArray[np.int32],
-    out: NDArray[np.int32],
+    neighbours: Array,
+    weights: Array,
+    means: Array,
+    magnitudes: Array,
+    base: int,
+    grid: Array,
+    active: Array,
+    count: int,
+    own: Array,
+    around: Array,
+    classes: Array,
 ) -> None:
-    """Write the weighted magnitudes of lower frequencies: four times the block's own and those of its four neighbours."""
+    """Write the class of each index of one frequency, for the active blocks.
+
+    The activity of a block is the weighted sum of the magnitudes of lower frequencies, four times its own and once
+    those of its four neighbours in the plane; a block at the border counts as its own neighbour. Each step of half an
+    octave that it lies above is one class more.
+    """
+    expected = expected_activity(place, neighbours, weights, means)
+    if expected == 0:
+        for i in range(count):
+            classes[i] = max(base, 1)
+        return
+    down, across = grid[1], grid[2]
+    blocks = own.size
     for block in range(blocks):
         own[block] = 0
     for n in range(neighbours.shape[1]):
@@ -114,85 +137,64 @@ def activity(
         if weight > 0:
             row = magnitudes[neighbours[place, n]]
             for block in range(blocks):
-                own[block] += weight * np.int32(row[block])
-    for start in range(0, blocks, across):
-        y = (start // across) % down
-        upper = start - across if y > 0 else start
-        lower = start + across if y < down - 1 else start
-        for x in range(across):
-            out[start + x] = 4 * own[start + x] + own[upper + x] + own[lower + x]
-        out[start] += own[start]
-        for x in range(1, across):
-            out[start + x] += own[start + x - 1]
-            out[start + x - 1] += own[start + x]
-        out[start + across - 1] += own[start + across - 1]
-
-
-@kernel
-def classify(
-    place: int,
-    neighbours: NDArray[np.int64],
-    weights: NDArray[np.int64],
-    means: NDArray[np.int64],
-    magnitudes: NDArray[np.uint16],
-    base: int,
-    down: int,
-    across: int,
-    blocks: int,
-    own: NDArray[np.int32],
-    around: NDArray[np.int32],
-    classes: NDArray[np.uint8],
-) -> None:
-    """Write the class of each index of one frequency."""
-    expected = expected_activity(place, neighbours, weights, means)
-    if expected == 0:
-        for block in range(blocks):
-            classes[block] = max(base, 1)
-        return
-    steps = np.empty(RATIOS.size, np.int64)
-    thresholds(expected, steps)
-    activity(place, neighbours, weights, magnitudes, down, across, blocks, own, around)
-    for block in range(blocks):
-        spread = base - BELOW
-        for j in range(steps.size):
-            spread += 1 if around[block] > steps[j] else 0
-        classes[block] = max(spread, 1)
+                own[block] += np.int32(weight * np.int32(row[block]))
+    for i in range(count):
+        block = active[i]
+        x, y = block % across, (block // across) % down
+        left = block - 1 if x > 0 else block
+        right = block + 1 if x < across - 1 else block
+        upper = block - across if y > 0 else block
+        lower = block + across if y < down - 1 else block
+        around[i] = np.int32(4 * own[block] + own[left] + own[right] + own[upper] + own[lower])
+        classes[i] = max(base - BELOW, 0)
+    # A base below the range starts at class 0, so its first steps count for nothing.
+    missing = max(BELOW - base, 0)
+    for j in range(missing, RATIOS.size):
+        step = np.int32(min((expected * RATIOS[j]) >> 20, 2**31 - 1))
+        for i in range(count):
+            classes[i] += np.uint8(around[i] > step)
+    for i in range(count):
+        classes[i] = max(classes[i], np.uint8(1))
 
 
 @kernel
 def split_indices(
-    indices: NDArray[np.int32],
-    order: NDArray[np.int64],
-    neighbours: NDArray[np.int64],
-    weights: NDArray[np.int64],
-    bands: NDArray[np.int64],
-    band_classes: NDArray[np.int64],
-    means: NDArray[np.int64],
-    down: int,
-    across: int,
-    blocks: int,
-    symbols: NDArray[np.uint8],
-    tables: NDArray[np.uint8],
-    histogram: NDArray[np.uint32],
-    low_bits: NDArray[np.uint8],
-    listed: NDArray[np.int64],
+    indices: Array,
+    order: Array,
+    neighbours: Array,
+    weights: Array,
+    bands: Array,
+    band_classes: Array,
+    means: Array,
+    grid: Array,
+    last: Array,
+    symbols: Array,
+    tables: Array,
+    histogram: Array,
+    low_bits: Array,
+    listed: Array,
 ) -> tuple[int, int, int]:
     """Write symbols and tables in coding order, low bits and listed numbers; return how many of each of the three."""
+    blocks = last.size
     magnitudes = np.zeros((order.size, blocks), np.uint16)
     own, around = np.empty(blocks, np.int32), np.empty(blocks, np.int32)
-    classes = np.empty(blocks, np.uint8)
-    padded = (blocks + 7) // 8 * 8
-    at = bits = position = 0
+    classes, active = np.empty(blocks, np.uint8), np.empty(blocks + 1, np.int64)
+    at = bits = position = count = 0
+    before = -1
     for place in range(order.size):
-        base = band_classes[bands[place]]
-        if base == 0:
+        band = bands[place]
+        base = band_classes[band]
+        if band != before:
+            count = select(last, band, active)
+            before = band
+        if base == 0 or count == 0:
             continue
-        row = indices[order[place]]
-        classify(place, neighbours, weights, means, magnitudes, base, down, across, blocks, own, around, classes)
-        for block in range(blocks):
-            shift, table = shift_of(classes[block]), table_of(classes[block])
-            value = row[block]
-            magnitudes[order[place], block] = min(abs(value), MAGNITUDE_LIMIT)
+        row, kept = indices[order[place]], magnitudes[order[place]]
+        classify(place, neighbours, weights, means, magnitudes, base, grid, active, count, own, around, classes)
+        for i in range(count):
+            shift, table = shift_of(classes[i]), table_of(classes[i])
+            value = row[active[i]]
+            kept[active[i]] = min(abs(np.int64(value)), MAGNITUDE_LIMIT)
             for bit in range(shift):
                 low_bits[bits >> 3] |= ((value >> bit) & 1) << (bits & 7)
                 bits += 1
@@ -201,54 +203,59 @@ def split_indices(
                 listed[position] = value >> shift
                 position += 1
                 symbol = 0
-            symbols[at + block] = symbol
-            tables[at + block] = table
+            symbols[at + i] = symbol
+            tables[at + i] = table
             histogram[table, symbol] += 1
-        for block in range(blocks, padded):
-            tables[at + block] = 255
+        padded = (count + 7) // 8 * 8
+        for i in range(count, padded):
+            tables[at + i] = 255
         at += padded
     return at, bits, position
 
 
 @kernel
 def join_indices(
-    order: NDArray[np.int64],
-    neighbours: NDArray[np.int64],
-    weights: NDArray[np.int64],
-    bands: NDArray[np.int64],
-    band_classes: NDArray[np.int64],
-    means: NDArray[np.int64],
-    down: int,
-    across: int,
-    blocks: int,
-    group: NDArray[np.uint8],
-    table_slots: NDArray[np.uint32],
-    words: NDArray[np.uint16],
-    states: NDArray[np.uint32],
-    low_bits: NDArray[np.uint8],
-    listed: NDArray[np.int64],
-    indices: NDArray[np.int32],
+    order: Array,
+    neighbours: Array,
+    weights: Array,
+    bands: Array,
+    band_classes: Array,
+    means: Array,
+    grid: Array,
+    last: Array,
+    group: Array,
+    table_slots: Array,
+    words: Array,
+    states: Array,
+    low_bits: Array,
+    listed: Array,
+    indices: Array,
 ) -> int:
-    """Decode all indices into `indices` (frequencies, blocks); return 0, or 1 where bytes run out or are left over."""
+    """Decode indices into zeros (frequencies, blocks); return 0, or 1 where bytes run out or are left over."""
+    blocks = last.size
     magnitudes = np.zeros((order.size, blocks), np.uint16)
     own, around = np.empty(blocks, np.int32), np.empty(blocks, np.int32)
-    classes = np.empty(blocks, np.uint8)
+    classes, active = np.empty(blocks, np.uint8), np.empty(blocks + 1, np.int64)
     limit = words.size - 8
-    word = bits = position = 0
+    word = bits = position = count = 0
+    before = -1
     for place in range(order.size):
-        base = band_classes[bands[place]]
-        row = indices[order[place]]
-        if base == 0:
-            for block in range(blocks):
-                row[block] = 0
+        band = bands[place]
+        base = band_classes[band]
+        if band != before:
+            count = select(last, band, active)
+            before = band
+        if base == 0 or count == 0:
             continue
-        classify(place, neighbours, weights, means, magnitudes, base, down, across, blocks, own, around, classes)
-        for start in range(0, blocks, 8):
+        row, kept = indices[order[place]], magnitudes[order[place]]
+        classify(place, neighbours, weights, means, magnitudes, base, grid, active, count, own, around, classes)
+        for start in range(0, count, 8):
             if word > limit:
                 return 1
-            for lane in range(min(8, blocks - start)):
+            for lane in range(min(8, count - start)):
+                spread = classes[start + lane]
                 x = states[lane]
-                entry = table_slots[group[table_of(classes[start + lane])], x & np.uint32(4095)]
+                entry = table_slots[group[table_of(spread)], x & np.uint32(4095)]
                 x = ((entry >> np.uint32(20)) + np.uint32(1)) * (x >> np.uint32(12)) + (
                     (entry >> np.uint32(8)) & np.uint32(4095)
                 )
@@ -256,21 +263,21 @@ def join_indices(
                     x = (x << np.uint32(16)) | np.uint32(words[word])
                     word += 1
                 states[lane] = x
-                row[start + lane] = np.int32(entry & np.uint32(255)) - 128
-        for block in range(blocks):
-            shift, value = shift_of(classes[block]), np.int64(row[block])
-            if value == -128:
-                if position >= listed.size:
-                    return 1
-                value = listed[position]
-                position += 1
-            if shift > 0:
-                if bits + shift > low_bits.size * 8:
-                    return 1
-                value <<= shift
-                for bit in range(shift):
-                    value |= np.int64((low_bits[bits >> 3] >> (bits & 7)) & 1) << bit
-                    bits += 1
-            row[block] = np.int32(value)
-            magnitudes[order[place], block] = min(abs(np.int64(row[block])), MAGNITUDE_LIMIT)
+                value = np.int64(entry & np.uint32(255)) - 128
+                if value == -128:
+                    if position >= listed.size:
+                        return 1
+                    value = listed[position]
+                    position += 1
+                shift = shift_of(spread)
+                if shift > 0:
+                    if bits + shift > low_bits.size * 8:
+                        return 1
+                    value <<= shift
+                    for bit in range(shift):
+                        value |= np.int64((low_bits[bits >> 3] >> (bits & 7)) & 1) << bit
+                        bits += 1
+                block = active[start + lane]
+                row[block] = np.int32(value)
+                kept[block] = min(abs(np.int64(row[block])), MAGNITUDE_LIMIT)
     return 0 if word == limit and position == listed.size and (bits + 7) >> 3 == low_bits.size else 1

@@ -7,6 +7,9 @@ from typing import Any, TypeVar
 
 import numba
 
+Array = Any
+"""An array as a kernel sees it: numba takes its type from the argument, and arithmetic on its numbers is the machine's."""
+
 Function = TypeVar("Function", bound=Callable[..., Any])
 
 
