@@ -265,7 +265,11 @@ def _run(
             error.left = f"{len(finished)} finished regions are kept in {target.partial.name} for --resume."
         raise
     journal.close()
-    target.finish()
+    try:
+        target.finish()
+    except StackboundError as error:
+        error.left = f"The complete and verified store is {target.partial.name}."
+        raise
     return _report(plan, target, workers, memory, resumed=len(kept), **outcome)
 
 

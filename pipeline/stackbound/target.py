@@ -127,7 +127,12 @@ class Target:
         replacing = os.path.lexists(self.path)
         if replacing:
             rename(self.path, self.replaced)
-        rename(self.partial, self.path)
+        try:
+            rename(self.partial, self.path)
+        except BaseException:
+            if replacing:
+                rename(self.replaced, self.path)
+            raise
         sync_folder(self.path.parent)
         if replacing:
             _remove(self.replaced)

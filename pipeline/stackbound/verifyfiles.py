@@ -25,6 +25,9 @@ from stackbound.store import ARRAY, LOG, read_store, shard_name
 _LITTER = {".ds_store", "thumbs.db", "ehthumbs.db", "desktop.ini", ".directory", ".localized"}
 _LITTER_STARTS = ("._", ".nfs", ".fuse_hidden")
 
+# So many regions may be missing before the shape itself is held to be damaged.
+_MISSING = 100_000
+
 
 @dataclass
 class Findings:
@@ -134,8 +137,15 @@ def _read_header(header: Record, expected: Expected) -> None:
     lengths = {len(info.axes), len(info.shape), len(grid.tile), len(grid.region)}
     if len(lengths) != 1 or min(info.shape + grid.tile + grid.region) < 1:
         raise ValueError("shapes that do not fit")
+    if not _believable(info, grid, len(expected.regions)):
+        raise ValueError("more regions than records")
     expected.info, expected.grid = info, grid
     expected.promise = Promise.from_record(header["promise"], info.axes, info.dtype)
+
+
+def _believable(info: StackInfo, grid: Grid, known: int) -> bool:
+    """Return whether a stack could have the regions that are known of it: damaged shapes must not keep a check busy."""
+    return math.prod(counts(info.shape, grid.region)) <= known + _MISSING
 
 
 def _check_records(log: Log, expected: Expected, findings: Findings) -> None:
@@ -231,6 +241,9 @@ def check_metadata(store: Path, expected: Expected, findings: Findings) -> bool:
             findings.problem(error.where or "zarr.json", error.what)
         return False
     if expected.info is None:
+        if not _believable(stored.info, stored.grid, len(expected.regions)):
+            findings.problem("zarr.json", "the metadata describe a stack that cannot be this one")
+            return False
         # The log does not tell: what the metadata say is better than nothing.
         expected.info, expected.grid, expected.promise = stored.info, stored.grid, stored.promise
     ours = (expected.info.axes, expected.info.shape, expected.info.dtype, expected.grid, expected.promise)

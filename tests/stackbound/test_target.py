@@ -149,3 +149,25 @@ def test_renames_are_retried_where_windows_refuses(tmp_path, monkeypatch):
     module._patiently(action, "it cannot be renamed", tmp_path)
 
     assert 3 == len(calls)
+
+
+def test_a_rename_that_fails_puts_the_old_store_back(tmp_path, monkeypatch):
+    """Where the new store cannot get its name, the old one has it."""
+    from stackbound import target as module
+
+    target = Target(tmp_path / "t")
+    make_store(target.path, "old")
+    make_store(target.partial, "new")
+    real = module.rename
+
+    def failing(old, new):
+        if old == target.partial:
+            raise TargetError("it cannot be renamed")
+        real(old, new)
+
+    monkeypatch.setattr(module, "rename", failing)
+    with pytest.raises(TargetError):
+        target.finish()
+
+    assert "old" == (target.path / "stackbound" / "note").read_text(encoding="utf-8")
+    assert target.partial.exists()

@@ -273,3 +273,16 @@ def test_garbage_never_crashes_a_check(store, seed):
                 path.write_bytes(data.replace(b"6", b"9").replace(b"[", b"{", 1))
 
     assert problems(store)
+
+
+def test_an_absurd_shape_does_not_keep_a_check_busy(store):
+    """Metadata that claim a stack of 10**18 pixels are named as damage at once, with and without a log."""
+    (store / "stackbound" / "verification.jsonl").unlink()
+    for name in ("zarr.json", "0/zarr.json"):
+        data = (store / name).read_bytes()
+        (store / name).write_bytes(
+            data.replace(b"\n    6,", b"\n    1000000000000,").replace(b" 6,", b" 1000000000000,")
+        )
+    found = problems(store)
+
+    assert any("cannot be this one" in line or "damaged" in line for line in found)
