@@ -74,8 +74,8 @@ class Whole:
     """The same, less what a tiny stack takes with the same options: interpreter, libraries, compiled kernels."""
     verify_wall: float
     verify_above_libraries: int
-    plane_wall: float
-    """Opening the store and reading one plane of it, interpreter and imports apart."""
+    plane_cpu: float
+    """CPU seconds for opening the store and reading one plane of it, interpreter and imports apart."""
     plane_bytes: int | None
     """Bytes read for it, where the system counts them (Linux)."""
     encode_wall: float
@@ -146,7 +146,7 @@ def measure(folder: Path, size: int, memory: list[str], workers: int, base: int,
     report = json.loads(used.output)
     checked = run([STACKBOUND, "verify", str(store), "--json"])
     encode_wall, codec_wall, codec_cpu = codec_alone(stack.shape, source, workers)
-    plane_wall, plane_bytes = read_plane(store, folder / TINY_STORE)
+    plane_cpu, plane_bytes = read_plane(store, folder / TINY_STORE)
     return Whole(
         pixels=int(np.prod(stack.shape)),
         source_bytes=report["source_bytes"],
@@ -157,7 +157,7 @@ def measure(folder: Path, size: int, memory: list[str], workers: int, base: int,
         above_libraries=max(0, used.peak - base),
         verify_wall=checked.wall,
         verify_above_libraries=max(0, checked.peak - base_verify),
-        plane_wall=plane_wall,
+        plane_cpu=plane_cpu,
         plane_bytes=plane_bytes,
         encode_wall=encode_wall,
         codec_wall=codec_wall,
@@ -171,7 +171,7 @@ def line(w: Whole) -> str:
     read = "?" if w.plane_bytes is None else f"{w.plane_bytes / 1e6:.2f}"
     return (
         f"{per:8.0f}M{w.wall / per:12.4f}{w.cpu / per:11.4f}{w.source_bytes / w.store_bytes:7.2f}{mib(w.peak):>10}"
-        f"{mib(w.above_libraries):>9}{mib(w.verify_above_libraries):>12}{w.plane_wall:9.3f}{read:>10}"
+        f"{mib(w.above_libraries):>9}{mib(w.verify_above_libraries):>12}{w.plane_cpu:9.3f}{read:>10}"
         f"   {w.codec_wall / w.wall:.0%} ({w.encode_wall / w.wall:.0%}), {w.codec_cpu / w.cpu:.0%}"
     )
 
@@ -225,16 +225,16 @@ counter = pathlib.Path("/proc/self/io")
 def count():
     return int(counter.read_text().split()[1]) if counter.exists() else None
 stackbound.open(sys.argv[2])[0, 0, :1, :1]  # imports, and compiled kernels from their cache
-before, began = count(), time.perf_counter()
+before, began = count(), time.process_time()
 stack = stackbound.open(sys.argv[1])
 plane = stack[0, stack.shape[1] // 2]
-took, after = time.perf_counter() - began, count()
+took, after = time.process_time() - began, count()
 print(took, -1 if after is None else after - before)
 """
 
 
 def read_plane(store: Path, warm_up: Path) -> tuple[float, int | None]:
-    """Return seconds and bytes for opening a store and reading one plane in the middle; `warm_up` is another store."""
+    """Return CPU seconds and bytes for opening a store and reading a plane in the middle; `warm_up` is another."""
     took, count = run([sys.executable, "-c", READ_PLANE, str(store), str(warm_up)]).output.split()
     return float(took), None if count == "-1" else int(count)
 
