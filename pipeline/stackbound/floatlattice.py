@@ -134,7 +134,7 @@ class StepLattice(Lattice):
     def write(self, writer: Writer) -> None:
         """Write what `read_float_lattice` reads."""
         writer.number(STEPS)
-        least = self.tolerance if isinstance(self.tolerance, float) else float(self.tolerance.min())
+        least = float(np.min(self.tolerance))
         writer.data += struct.pack("<ddd", least, self.low, self.step)
         writer.number(self.span)
         writer.number(self.fineness)
@@ -142,7 +142,7 @@ class StepLattice(Lattice):
 
     def describe(self) -> dict[str, Any]:
         """Return the numbers of the lattice by name."""
-        least = self.tolerance if isinstance(self.tolerance, float) else float(self.tolerance.min())
+        least = float(np.min(self.tolerance))
         return {"tolerance": least, "lattice": "steps", "minimum": self.low, "step": self.step}
 
 
@@ -155,7 +155,8 @@ def bit_lattice(pixels: NDArray[Any], tolerance: float) -> BitLattice:
 
 def float_lattice(pixels: NDArray[Any], tolerance: float | NDArray[np.float64]) -> Lattice:
     """Return the lattice of floating-point pixels (nz, ny, nx) under a tolerance that was checked."""
-    least = float(tolerance.min()) if isinstance(tolerance, np.ndarray) else float(tolerance)
+    tolerance = tolerance if isinstance(tolerance, np.ndarray) else float(tolerance)
+    least = float(np.min(tolerance))
     finite = pixels[np.isfinite(pixels)]
     if least <= 0 or finite.size == 0:
         return bit_lattice(pixels, least)
@@ -202,7 +203,7 @@ def read_float_lattice(reader: Reader, shape: tuple[int, int, int], dtype: np.dt
         return BitLattice(low, width, tolerance)
     tolerance, start, step = struct.unpack("<ddd", reader.take(24))
     span, fineness = reader.number(SPAN_LIMIT), reader.number(SPAN_LIMIT)
-    if not (isfinite(start) and 0 <= step and isfinite(step)):
+    if not (isfinite(start) and step >= 0 and isfinite(step)):
         raise damaged("its lattice is not one that an encoder chooses")
     return StepLattice(start, step, span, fineness, tolerance, read_tolerances(reader, shape, span))
 

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 from stackbound.kernels import golomb
 from stackbound.kernels.bound import reconstruct, residual
+from stackbound.tilecodec import TileCoder
 from stackbound_stages.none import PredictNone
 from stackbound_stages.rans import Rans
-from stackbound.tilecodec import TileCoder
 
 # Exact entropies, in bits, of N(0, 1) and of the Laplace density of variance 1 in bins of width D centred on 0
 # (definition of entropy; H ~ h - log2 D for small D: Gish & Pierce, IEEE Trans. Information Theory 14, 1968).
