@@ -149,7 +149,8 @@ def check_complete(tiff: tifffile.TiffFile, series: tifffile.TiffPageSeries, tab
     description = tiff.pages.first.description or ""
     if description.startswith("ImageJ="):
         promised = _imagej_planes(description, key.samplesperpixel)
-        found = planes if series.kind == "imagej" else len(table.pages)
+        alone = series.kind == "imagej" and len(series.pages) == 1  # its planes follow the one page
+        found = planes if alone else len(table.pages)
         if found < promised:
             raise SourceError(f"{found} of {promised} planes are in the file", where=name, remedy=CUT)
     levels = [level for one in tiff.series for level in one.levels]

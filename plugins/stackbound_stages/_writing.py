@@ -118,7 +118,7 @@ def _as_stored(pixels: NDArray[Any], start: Index, info: StackInfo, letters: str
         samples = int(info.attributes["samples"]) if "c" in letters else pixels.shape[place]
         pixels = pixels.reshape((*pixels.shape[:place], -1, samples, *pixels.shape[place + 1 :]))
         axes = axes.replace("c", "cs")
-        low["c"], low[SAMPLES] = low["c"] // samples, 0
+        low["c"] = low[SAMPLES] = 0  # boxes never part samples
         if "c" not in letters:
             pixels = pixels.reshape((*pixels.shape[:place], *pixels.shape[place + 1 :]))
             axes = axes.replace("cs", SAMPLES)

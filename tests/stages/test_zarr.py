@@ -64,6 +64,29 @@ def test_ome_zarr_images(tmp_path: Path, version: str) -> None:
     assert any("1 smaller levels" in note for note in info.notes)
 
 
+def test_scales_of_image_and_level_multiply(tmp_path: Path) -> None:
+    """A scale that version 0.4 gives for all levels multiplies that of the level."""
+    write_ome(tmp_path / "a.zarr", "0.4", FIVE, AXES, [1.5, 1.0, 2.0, 0.5, 0.25])
+    group = zarr.open_group(str(tmp_path / "a.zarr"), mode="r+")
+    said: Any = group.attrs["multiscales"]
+    said[0]["coordinateTransformations"] = [{"type": "scale", "scale": [2.0, 1.0, 1.0, 3.0, 1.0]}]
+    group.attrs["multiscales"] = said
+
+    assert (3.0, None, 2.0, 1.5, 0.25) == loaded(tmp_path / "a.zarr")[0].scale
+
+
+def test_a_path_that_leads_out_of_the_image(tmp_path: Path) -> None:
+    """Metadata that name an array outside the image are refused."""
+    zarr.create_array(str(tmp_path / "other.zarr"), data=FIVE)
+    for path in ("../other.zarr", str(tmp_path / "other.zarr")):
+        datasets = [{"path": path, "coordinateTransformations": [{"type": "scale", "scale": [1.0] * 5}]}]
+        said = {"version": "0.5", "multiscales": [{"axes": AXES, "datasets": datasets}]}
+        zarr.create_group(str(tmp_path / "a.zarr"), attributes={"ome": said}, overwrite=True)
+
+        with pytest.raises(SourceError, match="is not there"):
+            loaded(tmp_path / "a.zarr")
+
+
 def test_axes_with_other_names(tmp_path: Path) -> None:
     """Axes with names of their own are told by their types and their order."""
     axes = [{"name": "frame", "type": "time"}, *({"name": name, "type": "space"} for name in ("d", "v", "u"))]
