@@ -268,6 +268,13 @@ def test_the_code_of_the_readme_runs(tmp_path, monkeypatch, capfd):
     assert blocks
 
 
+def test_the_byte_layout_is_the_one_that_stores_carry():
+    """DEVELOPERS.md holds the page that goes into every store, word for word."""
+    page = (ROOT / "pipeline" / "stackbound" / "DECODE.txt").read_text(encoding="utf-8")
+
+    assert f"```text\n{page.rstrip()}\n```" in DEVELOPERS
+
+
 def test_the_plugin_of_the_guide_works(tmp_path, monkeypatch, capfd, fresh_registry):
     """The plugin that DEVELOPERS.md shows, put into a file, does what the text beside it says."""
     import numpy as np
