@@ -94,7 +94,7 @@ def errors(original: Pixels, decoded: Pixels) -> Errors:
 _last = threading.local()
 
 
-def over(original: Pixels, decoded: Pixels, tolerance: Number) -> int:
+def over(original: Pixels, decoded: Pixels, tolerance: Number, found: Errors | None = None) -> int:
     """Return how many pixels are further from their original than the tolerance.
 
     Parameters
@@ -103,8 +103,15 @@ def over(original: Pixels, decoded: Pixels, tolerance: Number) -> int:
         Same shape and dtype.
     tolerance : int or float
         In stored pixel values. Float pixels under tolerance 0 must be equal bit for bit.
+    found : Errors, optional
+        What `errors` returned for them; most often it settles the question.
     """
-    count = _over_integers if original.dtype.kind in "iu" else _over_floats
+    integers = original.dtype.kind in "iu"
+    # For floats too a rounded error below the tolerance belongs to an exact one that is not above it; an equal one may
+    # belong to an exact one that is.
+    if found is not None and (found.changed == 0 or found.largest < tolerance + integers):
+        return 0
+    count = _over_integers if integers else _over_floats
     return sum(count(o, d, tolerance) for o, d in _blocks(original, decoded))
 
 

@@ -234,7 +234,7 @@ def measure(
         part = (original, decoded) if piece == box else (original[cut], decoded[cut])
         errors = compare.errors(*part)
         total += errors
-        outside += compare.over(*part, tolerance)
+        outside += compare.over(*part, tolerance, errors)
         if errors.largest and not outside:
             share = max(share, Fraction(errors.largest) / Fraction(tolerance))
     return total, share if not outside else float("inf"), outside

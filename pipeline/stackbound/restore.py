@@ -133,7 +133,12 @@ def _check_target(path: Path, store: Path, overwrite: bool) -> None:
         raise TargetError("The folder of the target does not exist.", where=str(path.parent), remedy="Create it first.")
     if os.path.lexists(path):
         if path.is_dir():
-            raise TargetError("The target is a folder.", where=str(path), left="It was left as it is.")
+            raise TargetError(
+                "The target is a folder.",
+                where=str(path),
+                left="It was left as it is.",
+                remedy="Choose another name.",
+            )
         if not overwrite:
             raise TargetError(
                 "The target exists already.",

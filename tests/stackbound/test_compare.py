@@ -37,6 +37,9 @@ def test_integers(pair, tolerance):
     assert sum(d * d for d in differences) == found.squares
     assert (original.min(), original.max()) == (found.lowest, found.highest)
     assert sum(abs(d) > tolerance for d in differences) == compare.over(original, decoded, tolerance)
+    assert compare.over(original, decoded, tolerance) == compare.over(
+        original, decoded, tolerance, compare.errors(original, decoded)
+    )
 
 
 @settings(deadline=None, max_examples=150)
@@ -50,6 +53,9 @@ def test_floats_refuse_exactly(pair, tolerance):
     inside = [d <= Fraction(tolerance) for d in exact]
 
     assert sum(not within for within in inside) == compare.over(original, decoded, tolerance)
+    assert compare.over(original, decoded, tolerance) == compare.over(
+        original, decoded, tolerance, compare.errors(original, decoded)
+    )
 
 
 def test_a_rounded_difference_does_not_excuse():
@@ -76,7 +82,9 @@ def test_tolerance_zero_is_bit_for_bit():
     """Under tolerance 0 a negative zero may not become a positive one."""
     original, decoded = np.array([-0.0, 1.0]), np.array([0.0, 1.0])
 
-    assert 1 == compare.over(original, decoded, 0)
+    assert (
+        1 == compare.over(original, decoded, 0) == compare.over(original, decoded, 0, compare.errors(original, decoded))
+    )
     assert 0 == compare.over(original, decoded, 0.5)
 
 
