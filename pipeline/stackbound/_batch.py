@@ -13,7 +13,7 @@ from .errors import SourceError, StackboundError, TargetError, UsageError
 if TYPE_CHECKING:
     from .reports import CompressReport, Progress
 
-STORE_SUFFIXES = (".ome.zarr", ".zarr", ".ozx")
+STORE_SUFFIXES = (".ome.zarr", ".zarr")
 _SOURCE_SUFFIXES = (".ome.tiff", ".ome.tif", ".ome.zarr", ".tiff", ".tif", ".npy", ".zarr", ".dcm")
 
 

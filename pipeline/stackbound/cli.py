@@ -64,8 +64,8 @@ def _show_version(context: click.Context, _: click.Parameter, wanted: bool) -> N
 def cli() -> None:
     """Compress image stacks under a maximum error that holds for every pixel, and prove it.
 
-    A store is an OME-Zarr folder (or one .ozx file) with a log of every comparison that was made. Anyone can read it
-    with zarr where stackbound is installed, and verify it again years later.
+    A store is an OME-Zarr folder with a log of every comparison that was made. Anyone can read it with zarr where
+    stackbound is installed, and verify it again years later.
     """
 
 
@@ -96,8 +96,8 @@ def cli() -> None:
 def compress(words: tuple[str, ...], *, as_json: bool, **options: Any) -> int:
     """Compress SOURCE into STORE, verify every pixel from disk, and log it.
 
-    SOURCE is a TIFF or NPY file, a folder of single-plane TIFFs or a quoted pattern such as 'plane_*.tif'. STORE ends
-    in .ome.zarr or .ozx. With several sources STORE is a folder, and each source becomes its own store in it.
+    SOURCE is a TIFF, NPY or Zarr, a folder of single-plane TIFFs or a quoted pattern such as 'plane_*.tif'. STORE ends
+    in .ome.zarr. With several sources STORE is a folder, and each source becomes its own store in it.
     """
     from . import _batch
 
@@ -145,8 +145,8 @@ def verify(store: str, *, as_json: bool, against: str | None, root: str | None, 
 def restore(store: str, target: str, *, as_json: bool) -> int:
     """Write the stack of STORE as a common image file, with its metadata.
 
-    The ending of TARGET says the format: .ome.tif (.ome.tiff), .tif (.tiff) or .npy. An existing TARGET is never
-    replaced. Every pixel lies within the store's tolerance of the original.
+    The ending of TARGET says the format: .ome.tif (.ome.tiff), .tif (.tiff), .npy or .ome.zarr (plain, without our
+    codec). An existing TARGET is never replaced. Every pixel lies within the store's tolerance of the original.
     """
     import stackbound
 

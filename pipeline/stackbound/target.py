@@ -22,6 +22,9 @@ from pathlib import Path
 from stackbound.errors import TargetError
 from stackbound.lock import Lock
 
+FILE_ENDINGS = (".tif", ".tiff", ".btf", ".npy", ".dcm", ".zip", ".ozx")
+"""A target with such a name is more likely a mistake, such as source and store in the wrong order, than a store."""
+
 
 class Target:
     """One target and the names beside it.
@@ -56,6 +59,12 @@ class Target:
         parent = self.path.parent
         if self.path.name in ("", ".", ".."):
             raise TargetError("The target needs a name.", where=str(self.path))
+        if self.path.name.lower().endswith(FILE_ENDINGS):
+            raise TargetError(
+                "A store is a folder, and this is the name of a file.",
+                where=str(self.path),
+                remedy="By custom the name of a store ends in .ome.zarr.",
+            )
         if not parent.is_dir():
             raise TargetError("The folder of the target does not exist.", where=str(parent), remedy="Create it first.")
         if not os.access(parent, os.W_OK | os.X_OK):

@@ -320,7 +320,9 @@ def test_a_bad_option_is_one_message(here, capfd, options, text):
     assert before == tree(here)
 
 
-@pytest.mark.parametrize("target", ["file.txt/out.ome.zarr", "embryo.tif", "missing/folder/out.ome.zarr"])
+@pytest.mark.parametrize(
+    "target", ["file.txt/out.ome.zarr", "embryo.tif", "out.tif", "out.OZX", "missing/a/out.ome.zarr"]
+)
 def test_an_unwritable_target_is_one_message(here, capfd, target):
     """A target that cannot be written is refused before anything is read, with nothing left behind."""
     write_stack("embryo.tif")
