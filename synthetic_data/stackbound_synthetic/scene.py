@@ -124,14 +124,14 @@ class LightSheetScene:
     def _body(self, depth: float, y: Plane, x: Plane) -> Plane:
         """Return where there is tissue (1) and where a gap (0), with soft borders: a sum of long waves, squashed."""
         random = generator(self.seed, BODY)
-        along_y, along_x = [], []
+        total, wave = np.full(self.size, 1.3, np.float32), np.empty(self.size, np.float32)
         for _ in range(5):
             waves = random.normal(size=3) / random.uniform(12.0, 40.0)
-            a = waves[1] * y + np.float32(random.uniform(0.0, 2 * np.pi) + waves[0] * depth)
+            a = (waves[1] * y + (random.uniform(0.0, 2 * np.pi) + waves[0] * depth)).astype(np.float32)
             b = np.float32(waves[2]) * x
-            along_y += [np.cos(a), -np.sin(a)]  # cos(a + b) = cos a cos b - sin a sin b
-            along_x += [np.cos(b), np.sin(b)]
-        total = np.float32(1.3) + np.stack(along_y, axis=1).astype(np.float32) @ np.stack(along_x).astype(np.float32)
+            # cos(a + b) as two products; a matrix product would round differently with the threads of its library.
+            total += np.multiply(np.cos(a)[:, None], np.cos(b), out=wave)
+            total -= np.multiply(np.sin(a)[:, None], np.sin(b), out=wave)
         return np.asarray(1 / (1 + np.exp(np.clip(-4 * total, -30, 30))), np.float32)
 
     def _illumination(self, z: int, depth: float, y: Plane, x: Plane) -> Plane:
