@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 from stackbound.axes import check_axes
 from stackbound.errors import SourceError, StackboundError
+from stackbound.guard import make
 from stackbound.stages import Load, OpenSource
 
 if TYPE_CHECKING:
@@ -97,27 +98,24 @@ def open_source(
         source = Path(source)
     _check_there(source)
     if load is not None:
-        chosen = registry.get("load", load)
-        assert issubclass(chosen, Load)
-        return _opened(chosen, source, axes)
+        return _opened(make(registry, "load", load), source, axes)
     names = registry.names("load")
     for name in names:
-        loader = registry.get("load", name)
-        assert issubclass(loader, Load)
-        if loader().recognises(source):
+        loader: Load = make(registry, "load", name)
+        if loader.recognises(source):
             return _opened(loader, source, axes)
-    failed = [str(failure) for failure in registry.failures]
+    failed = [str(failure) for failure in registry.failures if failure.stage is None or failure.stage[0] == "load"]
     raise SourceError(
         f"no loader recognises this {_what(source)}; tried: {', '.join(names) or 'none, there is no loader'}",
         where=str(source) if isinstance(source, Path) else None,
-        remedy="Export it as TIFF, OME-TIFF or NPY, or install a plugin that loads it."
+        remedy="Export it as TIFF, OME-TIFF, OME-Zarr or NPY, or install a plugin that loads it."
         + (f" Not loaded: {'; '.join(failed)}." if failed else ""),
     )
 
 
-def _opened(loader: type[Load], source: object, axes: str | None) -> OpenSource:
+def _opened(loader: Load, source: object, axes: str | None) -> OpenSource:
     try:
-        return loader().open(source, axes=axes)
+        return loader.open(source, axes=axes)
     except StackboundError:
         raise
     except OSError as error:

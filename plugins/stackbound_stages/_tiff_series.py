@@ -134,6 +134,14 @@ def stored_axes(series: tifffile.TiffPageSeries, axes: str | None, name: str) ->
     return stored, shape, notes
 
 
+def check_offsets(kind: str, size: int, name: str) -> None:
+    """Refuse LSM files beyond 4 GB: they are classic TIFFs whose 32-bit offsets start again from 0."""
+    if kind == "lsm" and size >= 2**32:
+        raise SourceError(
+            "an LSM file beyond 4 GB does not say where its planes lie", where=name, remedy="Export it as OME-TIFF."
+        )
+
+
 def check_complete(tiff: tifffile.TiffFile, series: tifffile.TiffPageSeries, table: PageTable, name: str) -> None:
     """Compare the planes that the file promises with those that it has."""
     if any(page is None for page in series.pages):

@@ -20,7 +20,7 @@ from ._tiff_ifd import CUT, PageTable, read_page_table
 from ._tiff_metadata import read_metadata
 from ._tiff_pages import CodedPlanes, SpacedPlanes, inner_axes, plane_offset
 from ._tiff_planes import plane_texts, spread_planes
-from ._tiff_series import check_complete, check_dtype, choose_series, plane_pages, stored_axes, watched
+from ._tiff_series import check_complete, check_dtype, check_offsets, choose_series, plane_pages, stored_axes, watched
 
 SUFFIXES = (".tif", ".tiff", ".btf", ".tf2", ".tf8")
 
@@ -68,6 +68,7 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
             tiff = tifffile.TiffFile(path)
             series, notes = choose_series(tiff, name)
             check_dtype(series.dtype, series.keyframe, name)
+            check_offsets(series.kind, table.size, name)
             check_complete(tiff, series, table, name)
             stored, shape, remarks = stored_axes(series, axes, name)
             layout = Layout(stored, shape)

@@ -4,7 +4,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from stackbound.errors import SourceError, UsageError
+from stackbound.errors import PluginError, SourceError, UsageError
+from stackbound.plugins import use_plugin
 from stackbound.sources import expand_sources, natural_key, open_source
 
 
@@ -108,3 +109,36 @@ def test_a_loader_can_be_named(tmp_path: Path) -> None:
 
     with open_source(path, load="npy") as source:
         assert "yx" == source.info.axes
+
+
+@pytest.mark.usefixtures("fresh_registry")
+def test_a_loader_of_others_that_raises_is_named(tmp_path: Path) -> None:
+    """A plugin's loader that raises is named with where it comes from; it does not take the program down."""
+    plugin = tmp_path / "odd_loader.py"
+    plugin.write_text(
+        """
+from stackbound import hookimpl
+from stackbound.stages import Load
+
+
+class Odd(Load):
+    name = "odd"
+
+    def recognises(self, source):
+        raise RuntimeError("made up")
+
+    def open(self, source, *, axes=None):
+        raise RuntimeError("made up")
+
+
+@hookimpl
+def stackbound_stages():
+    return [Odd]
+""",
+        encoding="utf-8",
+    )
+    use_plugin(plugin)
+    np.save(tmp_path / "a.npy", np.zeros((20, 20), np.uint8))
+
+    with pytest.raises(PluginError, match=r"odd.*made up"):
+        open_source(tmp_path / "a.npy", load="odd")

@@ -448,6 +448,16 @@ def test_damaged_bytes_give_an_error_of_our_own(tmp_path: Path) -> None:
             loaded(tmp_path / "b.tif")
 
 
+def test_offsets_that_start_again() -> None:
+    """LSM files beyond 4 GB, whose offsets wrap, are refused; others of any size are not."""
+    from stackbound_stages._tiff_series import check_offsets
+
+    check_offsets("lsm", 2**32 - 1, "a.lsm")
+    check_offsets("ome", 2**40, "a.ome.tif")
+    with pytest.raises(SourceError, match="beyond 4 GB"):
+        check_offsets("lsm", 2**32, "a.lsm")
+
+
 def test_a_chain_of_pages_that_turns_back(tmp_path: Path) -> None:
     """A page table that leads back to an earlier page is refused instead of read for ever."""
     tifffile.imwrite(tmp_path / "a.tif", PLANES[:2], metadata=None)
