@@ -159,7 +159,8 @@ def _value(key: str, value: Any) -> str:
     if isinstance(value, bool):
         return "yes" if value else "no"
     if isinstance(value, int):
-        return f"{format_size(value)} ({_count(value)} bytes)" if key.endswith("bytes") else _count(value)
+        exact = f" ({_count(value)} bytes)" if value >= 1000 else ""
+        return f"{format_size(value)}{exact}" if key.endswith("bytes") else _count(value)
     if isinstance(value, float):
         return f"{value:.4g}"
     if isinstance(value, Mapping):

@@ -9,7 +9,7 @@ from __future__ import annotations
 import contextlib
 import dataclasses
 import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
 from pathlib import Path
@@ -195,13 +195,24 @@ def _plan(
         configuration=pipeline.config.record(),
         plan=dict(coder.plan),
         plugins=[_origin_record(key, origin) for key, origin in sorted(pipeline.origins.items())],
-        plugin_files={
-            origin.file.name: origin.source
-            for origin in pipeline.origins.values()
-            if origin.file is not None and origin.source is not None
-        },
+        plugin_files=_plugin_files(pipeline.origins.values()),
     )
     return Plan(description, coder, pipeline, limits)
+
+
+def _plugin_files(origins: Iterable[Origin]) -> dict[str, bytes]:
+    """Return the text of each plugin file by its name, as the store keeps it."""
+    files: dict[str, bytes] = {}
+    for origin in origins:
+        if origin.file is None or origin.source is None:
+            continue
+        if files.setdefault(origin.file.name, origin.source) != origin.source:
+            raise PluginError(
+                "Two different plugin files of this name are in use, and a store keeps each by its name.",
+                where=str(origin.file),
+                remedy="Rename one of them.",
+            )
+    return files
 
 
 def _origin_record(stage: str, origin: Origin) -> dict[str, Any]:

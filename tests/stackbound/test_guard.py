@@ -141,6 +141,17 @@ def test_built_in_stages_are_not_watched():
     assert registry().get("quantize", "uniform") is type(pipeline.predict.quantize)
 
 
+def test_two_plugin_files_of_one_name_are_refused(here):
+    """A store keeps each plugin file by its name, so two different ones of one name cannot both be kept."""
+    write(here, WITHIN["zero"])
+    (here / "sub").mkdir()
+    (here / "sub" / "odd.py").write_text(FIGURE.format(made="pass", measured="return 0", combined="return '0'"))
+    config = {"quantize": {"name": "odd"}, "predict": {"name": "transform"}, "verify": {"figures": ["broken"]}}
+
+    with pytest.raises(PluginError, match="Two different plugin files"):
+        stackbound.compress("in.npy", "out.ome.zarr", tolerance=2, config=config, plugins=["odd.py", "sub/odd.py"])
+
+
 FIGURE = '''
 from stackbound import hookimpl
 from stackbound.stages import Verify
@@ -183,7 +194,7 @@ def stackbound_stages():
 )
 def test_a_broken_figure_is_named_and_leaves_no_store(here, made, measured, combined):
     """A figure that raises, changes pixels or answers no text ends the run with an error that names it."""
-    text = FIGURE.replace("{made}", made).replace("{measured}", measured).replace("{combined}", combined)
+    text = FIGURE.format(made=made, measured=measured, combined=combined)
     (here / "broken.py").write_text(text, encoding="utf-8", newline="\n")
     config = {"verify": {"figures": ["max-error", "broken"]}}
 
