@@ -415,10 +415,15 @@ def read_prediction(reader: Reader, shape: Shape, span: int, plain: bool) -> NDA
 def read_array(reader: Reader, shape: Shape, span: int, tolerance: Any) -> NDArray[np.int64]:
     """Return the lattice values of one array: prediction and residual, clipped to the span."""
     plain = reader.number(1) == 1
-    if reader.number(1):
+    kind = reader.number(3)
+    if kind in (1, 3):
         predicted = read_prediction(reader, shape, span, plain)
     else:
         predicted = np.full(shape, (span + 1) // 2, np.int64)
+    if kind >= 2:
+        if plain or not isinstance(tolerance, int) or not 0 < span < 2**17 or shape[1] < BANDS:
+            raise DamagedError("a tile of this kind is not coded in bands")
+        return read_bands(reader, predicted if kind == 3 else None, shape, span, 2 * tolerance + 1)
     residuals = read_zstd(reader, prod(shape)).reshape(shape) if plain else read_residuals(reader, shape)
     return np.clip(predicted + (2 * tolerance + 1) * residuals, 0, span)
 
@@ -442,6 +447,176 @@ def read_zstd(reader: Reader, count: int) -> NDArray[np.int64]:
         raise DamagedError("a compressed array has the wrong size")
     shuffled = np.frombuffer(raw, np.uint8).reshape(width, count).T
     return np.ascontiguousarray(shuffled).view(f"<i{width}").reshape(-1).astype(np.int64)
+
+
+# ------------------------------------------------------------------------------------------------------------- bands
+
+BANDS = 16
+HALO = 3
+
+
+def read_bands(
+    reader: Reader, base: NDArray[np.int64] | None, shape: Shape, span: int, width: int
+) -> NDArray[np.int64]:
+    """Return the lattice values of an array in which decoded neighbours foresee each value.
+
+    The rows of a plane are cut into sixteen bands, which are decoded side by side: the last axis of all arrays here.
+    """
+    nz, ny, nx = shape
+    flags, count = reader.number(3), 8 * reader.number(8)
+    taps = np.array(read_numbers(reader, 3 * count), np.int64).reshape(-1, 3)
+    weights = np.array(read_numbers(reader, 4 * (count + 3)), np.int64).reshape(4, -1)
+    offsets = np.array([0 if base is not None else reader.number(span) for _ in range(nz)])
+    bottom, top, first_class = reader.signed(), reader.signed(), reader.number(51)
+    known = ((taps[:, 0] == 0) & (taps[:, 1] < 0)) | (taps[:, 0] == -1)
+    reach = int(np.abs(weights).sum(1).max()) * max(abs(bottom), abs(top), 1) if weights.size else 0
+    if not known.all() or np.abs(taps).max(initial=0) > HALO or bottom > top or reach + 4096 >= 2**31:
+        raise DamagedError("the neighbours make no sense")
+    rows = -(-ny // BANDS)
+    full = ny - BANDS * (rows - 1)
+    residuals = BandResiduals(reader, nx, nz * ny * nx)
+    alone, clamped = flags >= 2, flags % 2 == 1
+    decoded = np.zeros((2, rows + 2 * HALO, nx + 2 * HALO, BANDS), np.int64)
+    energy = np.zeros((2, rows + 2 * HALO, nx, BANDS), np.int64)
+    out = np.zeros((nz, rows, nx, BANDS), np.int64)
+    for z in range(nz):
+        now, before = z % 2, 1 - z % 2
+        if z > 0:
+            decoded[now, :HALO], energy[now, :HALO] = decoded[before, :HALO], energy[before, :HALO]
+        for y in range(rows):
+            at = y + HALO
+            kind = 2 * min(z, 1) + min(y, 1)
+            # Left of a row lies the first value of the row above it.
+            decoded[now, at, :HALO] = decoded[now, at - 1, HALO]
+            sums = np.full((nx, BANDS), 2048)
+            for (dz, dy, dx), weight in zip(taps.tolist(), weights[kind, 3:].tolist()):
+                plane = decoded[now if dz == 0 else before]
+                sums += weight * plane[at + dy, HALO + dx : HALO + dx + nx]
+            low, high = np.full((nx, BANDS), bottom), np.full((nx, BANDS), top)
+            if clamped and y > 0:
+                above = decoded[now, at - 1]
+                three = np.stack([above[HALO - 1 + i : HALO - 1 + i + nx] for i in range(3)])
+                low, high = three.min(0), three.max(0)
+            if z == 0 and y == 0:
+                classes = np.full((nx, BANDS), first_class)
+            elif alone or z == 0:
+                classes = band_classes(14 * energy[now, at - 1] + 7 * energy[now, at - 2])
+            else:
+                around = energy[before, at - 1] + 2 * energy[before, at] + energy[before, at + 1]
+                classes = band_classes(3 * (2 * energy[now, at - 1] + energy[now, at - 2] + around))
+            found = residuals.row(classes, full if y == rows - 1 else BANDS)
+            line = decoded[now, at]
+            w1, w2, w3 = weights[kind, :3].tolist()
+            for x in range(nx):
+                left = line[x + 2]
+                foreseen = (sums[x] + w1 * left + w2 * line[x + 1] + w3 * line[x]) >> 12
+                foreseen = np.minimum(np.maximum(foreseen, np.minimum(low[x], left)), np.maximum(high[x], left))
+                line[x + HALO] = np.clip(foreseen + found[x] * width, bottom, top)
+            line[nx + HALO :] = line[nx + HALO - 1]
+            out[z, y] = line[HALO : nx + HALO]
+            padded = np.pad(np.minimum(np.abs(found), 65535), ((2, 2), (0, 0)), "edge")
+            energy[now, at] = sum(w * padded[i : i + nx] for i, w in enumerate((1, 2, 3, 2, 1)))
+            if y == 0:
+                decoded[now, :HALO] = line
+                if z == 0:
+                    energy[now, :HALO] = energy[now, at]
+        join_bands(decoded[now], rows)
+        join_bands(energy[now], rows)
+    residuals.end()
+    return from_bands(out, base, offsets, shape, span)
+
+
+def read_numbers(reader: Reader, count: int) -> list[int]:
+    """Return signed numbers that stand after their count, which must be as expected."""
+    if reader.number() != count:
+        raise DamagedError("numbers are missing")
+    return golomb(reader.sized(), count) if count else []
+
+
+def band_classes(energy: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Return 1 + floor(2 log2 energy) less what the unit takes, from the leading bits of a float32; 0 for nothing."""
+    return np.maximum((energy.astype(np.float32).view(np.int32).astype(np.int64) >> 22) - 253, 0)
+
+
+def join_bands(plane: NDArray[np.int64], rows: int) -> None:
+    """Fill the rows above and below a finished plane from the bands above and below; the outer ones repeat their own."""
+    for k in range(1, HALO + 1):
+        source = plane[HALO + max(rows - k, 0)].copy()
+        plane[HALO - k, :, 1:], plane[HALO - k, :, 0] = source[:, :-1], plane[HALO, :, 0]
+    for k in range(1, HALO + 1):
+        source = plane[HALO + min(k - 1, rows - 1)].copy()
+        last = HALO + rows - 1
+        plane[last + k, :, :-1], plane[last + k, :, -1] = source[:, 1:], plane[last, :, -1]
+
+
+def from_bands(
+    banded: NDArray[np.int64], base: NDArray[np.int64] | None, offsets: NDArray[Any], shape: Shape, span: int
+) -> NDArray[np.int64]:
+    """Return the values of bands in their places: where rows do not come out even, the last bands have one less."""
+    rows = banded.shape[1]
+    full = shape[1] - BANDS * (rows - 1)
+    pieces = [banded[:, : rows if band < full else rows - 1, :, band] for band in range(BANDS)]
+    values = np.concatenate(pieces, 1) + (offsets[:, None, None] if base is None else base)
+    return np.asarray(np.clip(values, 0, span), np.int64)
+
+
+class BandResiduals:
+    """The residuals of one row of all bands after the other: one range coding state per band."""
+
+    def __init__(self, reader: Reader, columns: int, most: int) -> None:
+        group, slots = read_tables(reader, 52)
+        self.slots = np.array(slots, np.int64)[group]
+        self.states = np.frombuffer(reader.take(4 * BANDS), "<u4").astype(np.int64)
+        data = reader.sized()
+        if len(data) % 2:
+            raise DamagedError("half a word")
+        self.words = np.frombuffer(data, "<u2").astype(np.int64)
+        self.at = 0
+        self.columns = columns
+        bits = np.unpackbits(np.frombuffer(reader.sized(), np.uint8), bitorder="little")
+        count = reader.number(most)
+        self.listed = golomb(reader.sized(), count) if count else []
+        self.bits = bits[: bits.size - reader.number(7)].tolist()
+        self.bit = self.position = 0
+
+    def row(self, classes: NDArray[np.int64], lanes: int) -> NDArray[np.int64]:
+        """Return the residuals of a row; lanes beyond `lanes` are not coded and zero."""
+        out = np.full((self.columns, BANDS), 128)
+        for x in range(self.columns):
+            state = self.states[:lanes]
+            entry = self.slots[classes[x, :lanes], state & 4095]
+            state = ((entry >> 20) + 1) * (state >> 12) + ((entry >> 8) & 4095)
+            short = np.flatnonzero(state < 65536)
+            if self.at + short.size > self.words.size:
+                raise DamagedError("the words end too soon")
+            state[short] = state[short] << 16 | self.words[self.at : self.at + short.size]
+            self.at += short.size
+            self.states[:lanes] = state & 0xFFFFFFFF
+            out[x, :lanes] = entry & 255
+        out -= 128
+        for place in np.flatnonzero((out == -128) | (classes > 24)).tolist():
+            out.flat[place] = self._rest(int(out.flat[place]), int(classes.flat[place]))
+        return out
+
+    def _rest(self, value: int, spread: int) -> int:
+        """Return a residual with its low bits, or the listed one."""
+        if value == -128:
+            if self.position >= len(self.listed):
+                raise DamagedError("a listed number is missing")
+            value = min(max(self.listed[self.position], -(2**28)), 2**28)
+            self.position += 1
+        shift = (spread - 23) >> 1 if spread > 24 else 0
+        if self.bit + shift > len(self.bits):
+            raise DamagedError("low bits are missing")
+        low = sum(bit << place for place, bit in enumerate(self.bits[self.bit : self.bit + shift]))
+        self.bit += shift
+        return min(max(value << shift | low, -(2**28)), 2**28) if shift else value
+
+    def end(self) -> None:
+        """Refuse what is left over."""
+        whole = self.at == self.words.size and self.bit == len(self.bits) and self.position == len(self.listed)
+        if not whole or np.any(self.states != 65536):
+            raise DamagedError("the range coder does not end where it should")
 
 
 # --------------------------------------------------------------------------------------------------------------- tile
