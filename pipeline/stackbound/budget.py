@@ -17,7 +17,7 @@ from stackbound.stages import Grid, StackInfo
 
 REGION_COPIES = 4
 TILE_BYTES_PER_PIXEL = 24
-# A loader may hold a few planes besides its result.
+# A loader that does not say what it holds besides its result may hold a few planes.
 SOURCE_PLANES = 3
 # Blocks of the comparison, hashes, records.
 OVERHEAD = 8 << 20
@@ -77,4 +77,5 @@ def needed(regions: int, workers: int, info: StackInfo, grid: Grid) -> int:
     region = math.prod(lengths) * itemsize
     tile = math.prod(grid.tile) * (itemsize + TILE_BYTES_PER_PIXEL)
     plane = math.prod(info.shape[-2:]) * itemsize
-    return regions * (REGION_COPIES * region + OVERHEAD) + max(workers, regions) * tile + SOURCE_PLANES * plane
+    source = SOURCE_PLANES * plane if info.read_overhead is None else info.read_overhead
+    return regions * (REGION_COPIES * region + OVERHEAD) + max(workers, regions) * tile + source
