@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from codec_strategies import coders, integer_pixels, largest_error, plain_coder, tolerances
+from codec_strategies import coders, integer_pixels, largest_error, neighbour_coder, plain_coder, tolerances
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
@@ -137,7 +137,12 @@ PAYLOADS = [
         FIELD[0, :9, :9].astype(np.int64) << 40,
         RNG.integers(0, 2**32, (40, 3), np.uint32),
     )
-    for coder in (plain_coder(block=[1, 8, 8], step=4), TileCoder(PredictNone(), Rans()))
+    for coder in (
+        plain_coder(block=[1, 8, 8], step=4),
+        TileCoder(PredictNone(), Rans()),
+        neighbour_coder(),
+        neighbour_coder(base=True),
+    )
     for tolerance in (0, 4)
 ]
 

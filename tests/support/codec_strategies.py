@@ -9,10 +9,11 @@ import numpy as np
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 from stackbound.kernels.blocks import counts
-from stackbound.prediction import BlockPrediction, NoPrediction
+from stackbound.prediction import BlockPrediction, NeighbourPrediction, NoPrediction
 from stackbound.stages import Encode, Predict, Quantize, Transform
 from stackbound.tilecodec import TileCoder
 from stackbound_stages.dct import Dct
+from stackbound_stages.neighbours import NeighbourOptions, PredictNeighbours
 from stackbound_stages.none import PredictNone
 from stackbound_stages.rans import Rans
 from stackbound_stages.transform import PredictTransform, TransformOptions
@@ -26,7 +27,18 @@ def shapes(draw: st.DrawFn) -> tuple[int, ...]:
     """One to five axes, few pixels, one pixel and long rows among them."""
     return draw(
         st.sampled_from(
-            [(1,), (1, 1), (1, 300), (257, 1), (17, 33), (3, 20, 31), (5, 1, 40), (2, 1, 3, 9, 17), (9, 8, 8)]
+            [
+                (1,),
+                (1, 1),
+                (1, 300),
+                (257, 1),
+                (17, 33),
+                (3, 20, 31),
+                (5, 1, 40),
+                (2, 1, 3, 9, 17),
+                (3, 35, 8),
+                (2, 2, 1, 16, 9),
+            ]
         )
         | st.tuples(st.integers(1, 40), st.integers(1, 40))
         | st.tuples(st.integers(1, 9), st.integers(1, 18), st.integers(1, 18))
@@ -76,8 +88,8 @@ class Liar(Predict):
     def predict(self, tile: Any, plan: Any, size: Any) -> Any:
         """Return anything that has the right shapes."""
         rng = np.random.default_rng(self.seed)
-        if rng.random() < 0.1:
-            return NoPrediction()
+        if rng.random() < 0.2:
+            return NoPrediction() if rng.random() < 0.5 else _lying_neighbours(rng, NoPrediction())
         sides = [rng.choice([s for s in (1, 2, 4, 8, 16, 32) if s < 2 * n]) for n in tile.values.shape]
         block = (min(int(sides[0]), 16), int(sides[1]), int(sides[2]))
         blocks = prod(counts(tile.values.shape, block))
@@ -88,7 +100,20 @@ class Liar(Predict):
             "dct" if rng.random() < 0.5 else rng.integers(-(2**13), 2**13, (side, side), endpoint=True)
             for side in block
         )
-        return BlockPrediction(block, bases, steps, indices)
+        base = BlockPrediction(block, bases, steps, indices)
+        return base if rng.random() < 0.6 else _lying_neighbours(rng, base if rng.random() < 0.5 else NoPrediction())
+
+
+def _lying_neighbours(rng: np.random.Generator, base: NoPrediction | BlockPrediction) -> NeighbourPrediction:
+    """Return neighbours that foresee nothing: random places and weights."""
+    count = 8 * int(rng.integers(0, 5))
+    taps = np.stack([-rng.integers(0, 2, count), rng.integers(-3, 4, count), rng.integers(-3, 4, count)], 1)
+    taps[taps[:, 0] == 0, 1] = -1 - np.abs(taps[taps[:, 0] == 0, 1]) % 3
+    most = 2 ** int(rng.integers(1, 9))
+    weights = rng.integers(-most, most, (4, count)).astype(np.int32)
+    left = rng.integers(-most, most, (4, 3)).astype(np.int32)
+    alone, clamped = rng.random(2) < 0.5
+    return NeighbourPrediction(base, taps.astype(np.int64), weights, left, alone=bool(alone), clamped=bool(clamped))
 
 
 def plain_coder(transform: Transform | None = None, quantize: Quantize | None = None, **options: Any) -> TileCoder:
@@ -100,14 +125,22 @@ def plain_coder(transform: Transform | None = None, quantize: Quantize | None = 
     return TileCoder(stage, encode)
 
 
+def neighbour_coder(**options: Any) -> TileCoder:
+    """Return a coder with decoded neighbours."""
+    stage = PredictNeighbours(NeighbourOptions(**options), transform=Dct(), quantize=Uniform())
+    return TileCoder(stage, Rans())
+
+
 def coders() -> st.SearchStrategy[TileCoder]:
-    """The built-in predictors, blocks at both ends of what is allowed, and a predictor that lies."""
+    """Draw the built-in predictors, blocks at both ends of what is allowed, and a predictor that lies."""
     fixed = [
         TileCoder(PredictNone(), Rans()),
         plain_coder(block=[4, 8, 8], step=0),
         plain_coder(block=[1, 16, 16], step=6),
         plain_coder(block=[16, 32, 32], step=-2),
         plain_coder(block=[2, 1, 4], step=12),
+        neighbour_coder(),
+        neighbour_coder(base=True, clamped=True, stack=True),
     ]
     return st.sampled_from(fixed) | st.integers(0, 2**32).map(lambda seed: TileCoder(Liar(seed), Rans()))
 
