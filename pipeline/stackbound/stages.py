@@ -103,8 +103,9 @@ class StackInfo:
         What the matching `save` stage needs to write the same kind of file again (JSON values without floats).
     notes : tuple of str
         What the user should be told ("the first axis has no name: taken as z").
-    plane_cost : int
-        Leading axes beyond which reading less saves nothing: a source that decodes whole planes says 2.
+    read_overhead : int or None
+        Bytes that `OpenSource.read` may hold beyond its result; None where the loader does not know (a few planes are
+        reckoned then).
     """
 
     kind: str
@@ -118,7 +119,7 @@ class StackInfo:
     headers: Mapping[str, bytes] = field(default_factory=dict)
     attributes: Mapping[str, Any] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
-    plane_cost: int = 0
+    read_overhead: int | None = None
 
 
 class OpenSource(ABC):
