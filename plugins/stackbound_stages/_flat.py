@@ -39,12 +39,17 @@ class FlatPixels:
         self.path, self.offset, self.shape, self.dtype, self.name = path, offset, shape, dtype, name
         self._file: IO[bytes] | None = None
 
+    @property
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+        return PIECE
+
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box into `out`, an array of its shape, of any strides, in native byte order."""
         if self._file is None:
             self._file = self.path.open("rb", buffering=0)
         box = tuple(high - low for low, high in zip(start, stop, strict=True))
-        axis = self._run_axis(box)
+        axis = self._run_axis(box, out)
         step = prod(self.shape[axis + 1 :])
         whole = box[axis + 1 :] == self.shape[axis + 1 :]
         inner = tuple(slice(low, high) for low, high in zip(start[axis + 1 :], stop[axis + 1 :], strict=True))
@@ -59,15 +64,23 @@ class FlatPixels:
             else:
                 self._read_pieces(first, step, inner, part, self.shape[axis + 1 :])
 
-    def _run_axis(self, box: Index) -> int:
-        """Return the axis along which one read runs: axes behind it are read whole, even where the box is narrower."""
+    def _run_axis(self, box: Index, out: NDArray[Any]) -> int:
+        """Return the axis along which one read runs: axes behind it are read whole, even where the box is narrower.
+
+        What cannot be read straight into `out` passes through a piece, which must hold at least one step.
+        """
         size = self.dtype.itemsize
+
+        def possible(axis: int) -> bool:
+            if prod(self.shape[axis + 1 :]) * size <= PIECE:
+                return True
+            return box[axis + 1 :] == self.shape[axis + 1 :] and out[(0,) * axis].flags.c_contiguous
 
         def cost(axis: int) -> int:
             calls = prod(box[:axis])
             return calls * (CALL + box[axis] * prod(self.shape[axis + 1 :]) * size)
 
-        return min(range(len(box)), key=cost)
+        return min(filter(possible, range(len(box))), key=cost)
 
     def _read_pieces(self, first: int, step: int, inner: tuple[slice, ...], part: NDArray[Any], shape: Index) -> None:
         rows = max(1, PIECE // (step * self.dtype.itemsize))

@@ -15,6 +15,10 @@ from stackbound.stages import Index, OpenSource, SourceFile, StackInfo
 class Pixels(Protocol):
     """Pixels in stored order."""
 
+    @property
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box of the stored array into `out`."""
 

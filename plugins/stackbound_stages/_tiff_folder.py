@@ -7,6 +7,7 @@ import re
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import replace
+from math import prod
 from pathlib import Path
 from typing import Any
 
@@ -110,7 +111,7 @@ def _open_single_planes(paths: Sequence[Path], axes: str | None) -> StoredSource
     if texts is not None:
         metadata.headers["plane-descriptions.jsonl"] = texts
     metadata.attributes |= {"axes": layout.stored, "kind": "planes"}
-    return StoredSource(_info(layout, dtype, metadata, pixels.whole_planes), layout, pixels, files)
+    return StoredSource(_info(layout, dtype, metadata, pixels.overhead), layout, pixels, files)
 
 
 def _words(page: Page) -> str:
@@ -166,7 +167,7 @@ def _inner_letters(said: str, letters: str, shape: Index) -> str:
     )
 
 
-def _info(layout: Layout, dtype: np.dtype[Any], metadata: Metadata, whole: bool) -> StackInfo:
+def _info(layout: Layout, dtype: np.dtype[Any], metadata: Metadata, overhead: int) -> StackInfo:
     channels = dict(zip(layout.axes, layout.lengths, strict=True)).get("c", 0)
     return StackInfo(
         kind="TIFF planes",
@@ -180,7 +181,7 @@ def _info(layout: Layout, dtype: np.dtype[Any], metadata: Metadata, whole: bool)
         headers=metadata.headers,
         attributes=metadata.attributes,
         notes=tuple(metadata.notes),
-        plane_cost=2 if whole else 0,
+        read_overhead=overhead,
     )
 
 
@@ -194,6 +195,12 @@ class _StackFiles:
         self._paths, self._axes, self._open_file = paths, axes, open_file
         self._open: tuple[int, StoredSource] | None = None
 
+    @property
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+        one = self.opened(0)
+        return one.pixels.overhead + prod(one.info.shape[-2:]) * one.info.dtype.itemsize
+
     def opened(self, number: int) -> StoredSource:
         """Return one file's stack."""
         if self._open is None or self._open[0] != number:
@@ -202,9 +209,12 @@ class _StackFiles:
         return self._open[1]
 
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
-        """Read a box into `out`."""
-        for number in range(start[0], stop[0]):
-            out[number - start[0]] = self.opened(number).read(start[1:], stop[1:])
+        """Read a box into `out`, plane by plane."""
+        for index in np.ndindex(*out.shape[:-2]):
+            low = tuple(first + step for first, step in zip(start, index, strict=False))
+            high = tuple(first + 1 for first in low)
+            box = self.opened(low[0]).read((*low[1:], *start[-2:]), (*high[1:], *stop[-2:]))
+            out[index] = box.reshape(out.shape[-2:])
 
     def close(self) -> None:
         """Close the open file."""
@@ -247,6 +257,7 @@ def _open_stacks(paths: Sequence[Path], axes: str | None, open_file: OpenFile) -
         units=tuple(by_axis.get(axis, (None, None))[1] for axis in layout.axes),
         channel_names=first.channel_names if said[0] != "c" else (),
         ome_xml=None,
+        read_overhead=files.overhead,
         attributes={**first.attributes, "axes": layout.stored, "kind": "planes"},
         notes=(
             f"{len(paths)} files in natural order of their names are taken as {said[0]} (as --axes says).",

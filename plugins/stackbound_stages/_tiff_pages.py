@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import OrderedDict
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from math import prod
 from pathlib import Path
 from typing import Any
@@ -67,6 +67,11 @@ def plane_offset(page: Page, grid: Grid, size: int, where: str) -> int | None:
     return int(offsets[0]) if bool((offsets[:-1] + lengths[:-1] == offsets[1:]).all()) else None
 
 
+def decoding_overhead(pages: Iterable[Page]) -> int:
+    """Return the bytes held while strips or tiles are decoded: those kept, and one being unpacked and put in order."""
+    return CACHE + 3 * max(page.grid().full for page in pages)
+
+
 class SpacedPlanes:
     """Uncompressed planes anywhere in one file."""
 
@@ -75,6 +80,11 @@ class SpacedPlanes:
     ) -> None:
         self._offsets, self._lead = offsets, shape[: len(shape) - inner]
         self._plane = FlatPixels(path, 0, shape[len(shape) - inner :], dtype, name)
+
+    @property
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+        return self._plane.overhead
 
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box into `out`."""
@@ -122,8 +132,11 @@ class CodedPlanes:
         self._five = _match(shape[len(shape) - inner :], keyframe.shaped, name)
         self._cache: OrderedDict[tuple[int, int], NDArray[Any]] = OrderedDict()
         self._cached = 0
-        #: Whether each plane is one piece, so that reading less than a plane saves nothing.
-        self.whole_planes = pages[0].grid().count == 1
+
+    @property
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+        return decoding_overhead(self._pages[:1])
 
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box into `out`."""

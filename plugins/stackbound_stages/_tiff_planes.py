@@ -14,10 +14,10 @@ from numpy.typing import NDArray
 from stackbound.errors import SourceError
 from stackbound.stages import Index, SourceFile
 
-from ._flat import FlatPixels
+from ._flat import PIECE, FlatPixels
 from ._stored import Pixels, look_at
 from ._tiff_ifd import CUT, Page, PageTable, read_page_table
-from ._tiff_pages import CodedPlanes, inner_axes, plane_offset
+from ._tiff_pages import CodedPlanes, decoding_overhead, inner_axes, plane_offset
 from ._tiff_series import watched
 
 
@@ -39,9 +39,10 @@ class PlaneFiles:
         self._open: tuple[int, Pixels] | None = None
 
     @property
-    def whole_planes(self) -> bool:
-        """Whether planes must be decoded."""
-        return any(plane.offset is None for plane in self._planes)
+    def overhead(self) -> int:
+        """Bytes that `fill` may hold beside `out`."""
+        coded = [plane.page for plane in self._planes if plane.offset is None]
+        return decoding_overhead(coded) if coded else PIECE
 
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box into `out`."""

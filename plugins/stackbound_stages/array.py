@@ -41,6 +41,7 @@ class ArrayLoad(Load):
             layout = Layout(letters, shape)
         except SourceError as error:
             raise error.at(name) from None
+        pixels = LazyPixels(array, name)
         info = StackInfo(
             kind=name,
             axes=layout.axes,
@@ -50,8 +51,9 @@ class ArrayLoad(Load):
             units=(None,) * len(layout.axes),
             attributes={"format": "array", "axes": letters},
             notes=notes,
+            read_overhead=pixels.overhead,
         )
-        return StoredSource(info, layout, LazyPixels(array, name))
+        return StoredSource(info, layout, pixels)
 
 
 def _shape(array: Any, name: str) -> tuple[int, ...]:

@@ -62,6 +62,7 @@ class NpyLoad(Load):
             raise error.at(name) from None
         # Fortran order is C order of the turned array.
         stored = Layout(letters[::-1], shape[::-1]) if fortran else layout
+        pixels = FlatPixels(path, offset, stored.shape, dtype, name)
         info = StackInfo(
             kind="NPY",
             axes=layout.axes,
@@ -78,8 +79,9 @@ class NpyLoad(Load):
                 "byteorder": "big" if dtype.str[0] == ">" else "little",
             },
             notes=notes,
+            read_overhead=pixels.overhead,
         )
-        return StoredSource(info, stored, FlatPixels(path, offset, stored.shape, dtype, name), [file])
+        return StoredSource(info, stored, pixels, [file])
 
 
 def _read_header(path: Path, name: str) -> tuple[tuple[int, ...], bool, np.dtype[Any], int, bytes]:

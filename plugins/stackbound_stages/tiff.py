@@ -107,7 +107,8 @@ def open_file(path: Path, axes: str | None) -> StoredSource:
         headers=metadata.headers,
         attributes=metadata.attributes,
         notes=(*notes, *remarks, *metadata.notes),
-        plane_cost=2 if isinstance(pixels, CodedPlanes) and pixels.whole_planes else 0,
+        # Channels of samples each are put together in a copy.
+        read_overhead=None if {"c", "s"} <= set(stored) else pixels.overhead,
     )
     return StoredSource(info, layout, pixels, files)
 

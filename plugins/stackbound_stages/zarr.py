@@ -164,6 +164,7 @@ def _opened(
     channels = dict(zip(layout.axes, layout.lengths, strict=True)).get("c", 0)
     named = image.channel_names if image else ()
     xml = places[0] / "OME" / "METADATA.ome.xml"
+    pixels = LazyPixels(array, name)
     info = StackInfo(
         kind="OME-Zarr" if image else f"Zarr {array.metadata.zarr_format}",
         axes=layout.axes,
@@ -176,8 +177,9 @@ def _opened(
         headers=_headers(places),
         attributes={"format": "zarr", "axes": letters},
         notes=tuple(notes),
+        read_overhead=pixels.overhead,
     )
-    return StoredSource(info, layout, LazyPixels(array, name), _files(places))
+    return StoredSource(info, layout, pixels, _files(places))
 
 
 def _letters(array: zarr.Array[Any], image: OmeZarrImage | None, name: str) -> str:

@@ -67,6 +67,29 @@ def test_dask_arrays_are_read_box_by_box() -> None:
     assert [2, 3] == box[:, 0, 0].tolist()
 
 
+@pytest.mark.parametrize("limit", [1, 5_000, 40_000])
+def test_large_boxes_are_read_in_pieces(monkeypatch: pytest.MonkeyPatch, limit: int) -> None:
+    """A box beyond the limit is read in pieces of whole chunks, whatever the shape; the pixels are the same."""
+    from stackbound_stages import _lazy
+
+    monkeypatch.setattr(_lazy, "PIECE", limit)
+    asked: list[int] = []
+
+    class Chunked:
+        shape, dtype, chunks = FIVE.shape, FIVE.dtype, (1, 2, 2, 16, 16)
+
+        def __getitem__(self, box: tuple[slice, ...]) -> np.ndarray:
+            asked.append(FIVE[box].nbytes)
+            return FIVE[box]
+
+    with open_source(Chunked()) as source:
+        box = source.read((0, 1, 1, 3, 0), (2, 3, 5, 20, 32))
+
+    assert np.array_equal(FIVE[:, 1:, 1:, 3:20], box)
+    assert max(asked) <= max(limit, 2)
+    assert sum(asked) == box.nbytes
+
+
 def test_zarr_arrays_bring_their_names(tmp_path: Path) -> None:
     """A Zarr array object brings its dimension names."""
     array = zarr.create_array(str(tmp_path / "a.zarr"), data=FIVE, dimension_names=list("ctzyx"))

@@ -6,10 +6,13 @@ from pathlib import Path
 import numpy as np
 import pytest
 import skimage
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 from numpy.lib import format as npy_format
 from stackbound.errors import SourceError
 from stackbound.sources import open_source
 from stackbound.stages import StackInfo
+from stackbound_stages import _flat
 
 RNG = np.random.default_rng(9)
 CUBE = RNG.integers(-3000, 3000, (5, 20, 31)).astype(np.int16)
@@ -37,6 +40,28 @@ def test_memory_and_byte_orders(tmp_path: Path, order: str, dtype: str) -> None:
     assert np.array_equal(array, pixels)
     assert np.array_equal(array[1:4, 3:17, 2:30], box)
     assert box.flags.c_contiguous
+
+
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(data=st.data(), piece=st.sampled_from([8, 64, 1000]), dtype=st.sampled_from(["<u2", ">u2"]))
+def test_any_box_through_small_pieces(tmp_path: Path, data: st.DataObject, piece: int, dtype: str) -> None:
+    """However small the pieces that a box is read in, its pixels are the same."""
+    shape = tuple(data.draw(st.integers(1, 6)) for _ in range(4))
+    array = np.arange(np.prod(shape)).astype(dtype).reshape(shape)
+    (tmp_path / "a.bin").write_bytes(b"xyz" + array.tobytes())
+    start = tuple(data.draw(st.integers(0, n - 1)) for n in shape)
+    stop = tuple(data.draw(st.integers(low + 1, n)) for low, n in zip(start, shape, strict=True))
+    turn = data.draw(st.permutations(range(4)))
+    box = tuple(high - low for low, high in zip(start, stop, strict=True))
+    out = np.empty([box[axis] for axis in turn], np.uint16).transpose(np.argsort(turn))
+
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(_flat, "PIECE", piece)
+        pixels = _flat.FlatPixels(tmp_path / "a.bin", 3, shape, np.dtype(dtype), "a.bin")
+        pixels.fill(start, stop, out)
+        pixels.close()
+
+    assert np.array_equal(array[tuple(slice(low, high) for low, high in zip(start, stop, strict=True))], out)
 
 
 @pytest.mark.parametrize("version", [(1, 0), (2, 0), (3, 0)])
