@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stackbound import entropy
+from stackbound import entropy, memory
 from stackbound.byteio import Reader, Writer, damaged
 from stackbound.errors import PluginError
 from stackbound.kernels import bandcode, bandfit, bands, rans, tables
@@ -16,6 +17,8 @@ from stackbound.kernels.bandcode import CLASSES
 from stackbound.kernels.bandrows import LANES, SERIAL
 from stackbound.lattice import LatticeTile
 from stackbound.prediction import NeighbourPrediction, NoPrediction
+
+memory.keep()
 
 SHIFT = 12
 """Weights are in units of 2**-12."""
@@ -26,14 +29,15 @@ LEFT = [(0, 0, -1), (0, 0, -2), (0, 0, -3)]
 ABOVE = [(0, -1, 0), (0, -1, -1), (0, -1, 1), (0, -2, 0), (0, -1, -2), (0, -1, 2), (0, -2, -1), (0, -2, 1), (0, -3, 0)]
 FARTHER = [(0, -2, -2), (0, -2, 2), (0, -1, -3), (0, -1, 3), (0, -3, -1), (0, -3, 1), (0, -2, -3), (0, -2, 3)]
 FARTHEST = [(0, -3, -2), (0, -3, 2), (0, -3, -3), (0, -3, 3)]
-BEFORE = [(-1, 0, 0), (-1, 0, -1), (-1, 0, 1), (-1, -1, 0), (-1, 1, 0), (-1, -1, -1), (-1, -1, 1), (-1, 1, -1)] + [
-    (-1, 1, 1), (-1, 0, -2), (-1, 0, 2), (-1, -2, 0), (-1, 2, 0),
+BEFORE = [
+    (-1, 0, 0), (-1, 0, -1), (-1, 0, 1), (-1, -1, 0), (-1, 1, 0), (-1, -1, -1), (-1, -1, 1), (-1, 1, -1), (-1, 1, 1),
+    (-1, 0, -2), (-1, 0, 2), (-1, -2, 0), (-1, 2, 0),
 ]  # fmt: skip
 PLANE_TAPS = ABOVE + FARTHER + FARTHEST
 STACK_TAPS = ABOVE + FARTHER[:2] + BEFORE
 
-RUNS = 512
-"""Runs of pixels on which weights are fitted."""
+FEWEST_RUNS, MOST_RUNS, PIXELS_PER_RUN = 192, 512, 4096
+"""Runs of pixels on which weights are fitted: some hundred pixels per weight, and a small share of the tiles."""
 
 ROUNDS = 3
 """More rounds of reweighting change less than 0.1 %."""
@@ -45,9 +49,10 @@ def possible(span: int, height: int) -> bool:
 
 
 def plane_offsets(values: NDArray[np.int32]) -> NDArray[np.int64]:
-    """Return a level for each plane of values (nz, ny, nx): its mean on a seventh of the pixels."""
-    flat = values.reshape(len(values), -1)[:, ::7]
-    return flat.sum(1, dtype=np.int64) // flat.shape[1]
+    """Return a level for each plane of values (nz, ny, nx): its mean on every fourth row."""
+    out = np.empty(len(values), np.int64)
+    bands.plane_means(values, out)
+    return out
 
 
 def fit(
@@ -68,7 +73,8 @@ def fit(
     taps = LEFT + (STACK_TAPS if stack else PLANE_TAPS)
     taps += [(0, -1, 0)] * (-(len(taps) - SERIAL) % 8)
     places = np.array(taps, np.int64)
-    each = -(-RUNS // len(tiles))
+    pixels = sum(tile.values.size for tile in tiles)
+    each = -(-min(MOST_RUNS, max(FEWEST_RUNS, pixels // PIXELS_PER_RUN)) // len(tiles))
     gathered = np.empty((each * len(tiles), bandfit.RUN, len(taps) + 1))
     noises = np.empty(len(gathered))
     for number, (tile, base) in enumerate(zip(tiles, bases, strict=True)):
@@ -134,31 +140,68 @@ def encode(
     how : NeighbourPrediction
     tolerance, span : int
     """
-    nz, ny, nx = values.shape
-    rows = -(-ny // LANES)
-    offsets = np.zeros(nz, np.int64) if predicted.size else plane_offsets(values)
-    banded = np.empty((nz, rows, nx, LANES), np.int32)
-    bottom, top = bands.to_bands(values, predicted, offsets, banded)
-    checked = check(how, bottom, top)
-    residuals, classes = np.empty_like(banded), np.empty(banded.shape, np.uint8)
-    present = _present(nz, ny)
-    nothing = np.zeros(1, np.int64)
-    first = bands.walk(
-        banded, residuals, classes, present, checked.taps, checked.weights, checked.left, SHIFT, checked.alone,
-        checked.clamped, 2 * tolerance + 1, bottom, top, False, 0, nothing, np.zeros(1, np.uint32),
-        np.zeros(1, np.uint16), np.zeros(1, np.uint32), np.zeros(0, np.uint8), np.zeros(0, np.int64),
-    )  # fmt: skip
+    walked = _walk(values, predicted, how, tolerance, span)
     writer = Writer()
-    _write_how(writer, checked)
-    for offset in offsets.tolist() if not predicted.size else []:
+    _write_how(writer, walked.how)
+    for offset in walked.offsets.tolist() if not predicted.size else []:
         writer.number(offset)
-    writer.signed(bottom)
-    writer.signed(top)
-    writer.number(first)
-    _write_residuals(writer, residuals.reshape(-1), classes.reshape(-1), present, nx * LANES)
+    writer.number(walked.first_class)
+    present = _present(len(values), values.shape[1])
+    _write_residuals(writer, walked.residuals.reshape(-1), walked.classes.reshape(-1), present, values.shape[2] * LANES)
     out = np.empty(values.shape, np.int32)
-    bands.from_bands(banded, predicted, offsets, span, out)
+    bands.from_bands(walked.decoded, predicted, walked.offsets, span, out)
     return bytes(writer.data), out
+
+
+def estimate(
+    values: NDArray[np.int32], predicted: NDArray[np.int32], how: NeighbourPrediction, tolerance: int, span: int
+) -> float:
+    """Return about how many bits the residuals of a tile take: their entropy by class, without tables."""
+    walked = _walk(values, predicted, how, tolerance, span)
+    classes, residuals = walked.classes.reshape(-1), walked.residuals.reshape(-1)
+    counts = np.zeros((2, CLASSES * tables.SYMBOLS), np.uint32)
+    wide = bandcode.split(residuals, classes, np.empty(residuals.shape, np.uint8), counts)
+    histogram = (counts[0] + counts[1]).reshape(CLASSES, -1).astype(np.float64)
+    seen = histogram[histogram.any(1)]
+    shares = seen / seen.sum(1, keepdims=True)
+    bits = -float((seen * np.log2(shares, where=shares > 0, out=np.zeros_like(shares))).sum())
+    return bits + (bandcode.low_bits(classes) + 24 * float(histogram[:, 0].sum()) if wide else 0.0)
+
+
+@dataclass(frozen=True)
+class _Walked:
+    """What walking through a tile gives the encoder."""
+
+    how: NeighbourPrediction
+    offsets: NDArray[np.int64]
+    decoded: NDArray[np.int32]
+    residuals: NDArray[np.int32]
+    classes: NDArray[np.uint8]
+    first_class: int
+
+
+def _walk(
+    values: NDArray[np.int32], predicted: NDArray[np.int32], how: NeighbourPrediction, tolerance: int, span: int
+) -> _Walked:
+    nz, ny, nx = values.shape
+    offsets = np.zeros(nz, np.int64) if predicted.size else plane_offsets(values)
+    banded = np.empty((nz, -(-ny // LANES), nx, LANES), np.int32)
+    bands.to_bands(values, predicted, offsets, banded)
+    bottom, top = _range(offsets, predicted, span)
+    checked = check(how, bottom, top)
+    residuals, classes = np.empty(banded.shape, np.int32), np.empty(banded.shape, np.uint8)
+    first_class = bands.walk(
+        banded, residuals, classes, _present(nz, ny), checked.taps, checked.weights, checked.left, SHIFT,
+        checked.alone, checked.clamped, 2 * tolerance + 1, bottom, top, False, 0, *_NO_BYTES,
+    )  # fmt: skip
+    return _Walked(checked, offsets, banded, residuals, classes, first_class)
+
+
+_NO_BYTES = (
+    np.zeros(1, np.int64), np.zeros(1, np.uint32), np.zeros(1, np.uint16), np.zeros(1, np.uint32),
+    np.zeros(0, np.uint8), np.zeros(0, np.int64),
+)  # fmt: skip
+"""What walking needs to decode, when it encodes."""
 
 
 def decode(
@@ -170,7 +213,8 @@ def decode(
         raise damaged("a tile of this shape or range is not coded in bands")
     how = _read_how(reader)
     offsets = np.array([0 if predicted.size else reader.number(span) for _ in range(nz)], np.int64)
-    bottom, top, first = reader.signed(), reader.signed(), reader.number(CLASSES - 1)
+    first = reader.number(CLASSES - 1)
+    bottom, top = _range(offsets, predicted, span)
     how = check(how, bottom, top, damaged)
     group, slots = entropy.read_tables(reader, CLASSES)
     words, states = entropy.read_words(reader, LANES)
@@ -191,6 +235,13 @@ def decode(
     out = np.empty(shape, np.int32)
     bands.from_bands(banded, predicted, offsets, span, out)
     return out
+
+
+def _range(offsets: NDArray[np.int64], predicted: NDArray[np.int32], span: int) -> tuple[int, int]:
+    """Return the smallest and largest number that there can be in the bands."""
+    if predicted.size:
+        return -span, span
+    return -int(offsets.max()), span - int(offsets.min())
 
 
 def check(how: NeighbourPrediction, bottom: int, top: int, error: Any = PluginError) -> NeighbourPrediction:
@@ -239,7 +290,7 @@ def _read_how(reader: Reader) -> NeighbourPrediction:
 def _write_residuals(
     writer: Writer, residuals: NDArray[np.int32], classes: NDArray[np.uint8], present: NDArray[np.uint8], row: int
 ) -> None:
-    symbols = np.empty(residuals.size, np.uint8)
+    symbols = np.empty(residuals.shape, np.uint8)
     counts = np.zeros((2, CLASSES * tables.SYMBOLS), np.uint32)
     wide = bandcode.split(residuals, classes, symbols, counts)
     histogram = (counts[0] + counts[1]).reshape(CLASSES, tables.SYMBOLS)
@@ -248,7 +299,7 @@ def _write_residuals(
     starts, reciprocals = np.zeros(frequencies.shape, np.uint32), np.zeros(frequencies.shape, np.uint64)
     rans.prepare(frequencies.astype(np.uint32), starts, reciprocals)
     intervals = (frequencies.astype(np.uint64) << np.uint64(16)) | starts
-    words, states = np.empty(symbols.size + 1, np.uint16), np.empty(LANES, np.uint64)
+    words, states = np.empty((symbols.size + 1,), np.uint16), np.empty(LANES, np.uint64)
     begin = bandcode.encode(
         symbols, classes, present, row, group.astype(np.int64) * tables.SYMBOLS, intervals.reshape(-1),
         reciprocals.reshape(-1), words, states,

@@ -52,8 +52,8 @@ class NeighbourPrediction:
     base : NoPrediction or BlockPrediction
         Without a transform the base is the mean of each plane.
     taps : ndarray of int64, shape (n, 3)
-        (plane, row, column) of each neighbour relative to the pixel, in a row above or the plane before; n is a multiple
-        of 8.
+        (plane, row, column) of each neighbour relative to the pixel, in a row above or the plane before; n is a
+        multiple of 8.
     weights : ndarray of int32, shape (4, n)
         Weights in units of 2**-12: for the first row and the other rows of the bands of the first plane, then the same
         for later planes.

@@ -149,7 +149,7 @@ def check(prediction: BlockPrediction, tile: LatticeTile) -> BlockPrediction:
         A shape, a dtype or a number that no decoder could use.
     """
     block = prediction.block
-    if len(block) != 3 or any(side not in LENGTHS for side in block) or block[0] > DEEPEST_BLOCK:
+    if any(side not in LENGTHS for side in block) or block[0] > DEEPEST_BLOCK:
         raise PluginError(f"block {block} is not made of lengths {LENGTHS}, at most {DEEPEST_BLOCK} along z")
     blocks = prod(counts(tile.values.shape, block))
     indices, steps = prediction.indices, prediction.steps
@@ -180,7 +180,7 @@ def exact(block: tuple[int, ...], bases: tuple[str | NDArray[np.int64], ...]) ->
 def _write_prediction(writer: Writer, prediction: BlockPrediction) -> None:
     for side in prediction.block:
         writer.number(side.bit_length() - 1)
-    for side, base in zip(prediction.block, prediction.bases, strict=True):
+    for base in prediction.bases:
         if isinstance(base, str):
             writer.number(COSINE)
         else:

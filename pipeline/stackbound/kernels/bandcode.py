@@ -33,6 +33,23 @@ def shift_of(spread: int) -> int:
     return (spread - DIRECT + 1) >> 1 if spread > DIRECT else 0
 
 
+CHUNK = 4096
+"""Entries that are looked at together for whether one of them needs care."""
+
+
+@inlined
+def _fits(residuals: Any, classes: Any) -> bool:
+    """Return whether all residuals are symbols as they are."""
+    far = np.int32(0)
+    for i in range(residuals.size):
+        # Above 254 as an unsigned number: below -127 or above 127.
+        far |= np.int32(np.uint32(np.int32(residuals[i] + np.int32(127))) > np.uint32(254))
+    highest = np.uint8(0)
+    for i in range(classes.size):
+        highest = max(highest, classes[i])
+    return far == 0 and highest <= DIRECT
+
+
 @kernel
 def split(
     residuals: NDArray[np.int32], classes: NDArray[np.uint8], symbols: NDArray[np.uint8], counts: NDArray[np.uint32]
@@ -44,25 +61,23 @@ def split(
     bool
         Whether there are low bits or listed numbers.
     """
-    wide = np.int64(0)
-    for i in range(residuals.size):
-        # 1 where the residual does not fit or its class has low bits: two comparisons, no branch.
-        wide |= np.int64(np.uint32(np.int32(residuals[i] + np.int32(127))) > np.uint32(254)) | np.int64(
-            classes[i] > DIRECT
-        )
-    if wide:
-        for i in range(residuals.size):
-            value = (residuals[i] >> shift_of(np.int64(classes[i]))) + 128
-            symbols[i] = value if 0 < value < 256 else 0
-    else:
-        for i in range(residuals.size):
-            symbols[i] = np.int32(residuals[i] + np.int32(128))
+    wide = False
     # Two counters each, so that equal symbols side by side do not wait for each other.
     even, odd = counts[0], counts[1]
-    for i in range(0, residuals.size, 2):
-        even[(np.int64(classes[i]) << 8) + np.int64(symbols[i])] += np.uint32(1)
-        odd[(np.int64(classes[i + 1]) << 8) + np.int64(symbols[i + 1])] += np.uint32(1)
-    return wide != 0
+    for start in range(0, residuals.size, CHUNK):
+        r, c, s = residuals[start : start + CHUNK], classes[start : start + CHUNK], symbols[start : start + CHUNK]
+        if _fits(r, c):
+            for i in range(r.size):
+                s[i] = np.int32(r[i] + np.int32(128))
+        else:
+            wide = True
+            for i in range(r.size):
+                value = (r[i] >> shift_of(np.int64(c[i]))) + 128
+                s[i] = value if 0 < value < 256 else 0
+        for i in range(0, r.size, 2):
+            even[(np.int64(c[i]) << 8) + np.int64(s[i])] += np.uint32(1)
+            odd[(np.int64(c[i + 1]) << 8) + np.int64(s[i + 1])] += np.uint32(1)
+    return wide
 
 
 @kernel
@@ -72,14 +87,17 @@ def split_rest(
 ) -> tuple[int, int]:  # fmt: skip
     """Write low bits (one an element, least significant first) and listed numbers; return how many of each."""
     at = far = 0
-    for i in range(residuals.size):
-        shift = shift_of(np.int64(classes[i]))
-        for bit in range(shift):
-            bits[at] = (residuals[i] >> bit) & 1
-            at += 1
-        if symbols[i] == 0:
-            listed[far] = residuals[i] >> shift
-            far += 1
+    for start in range(0, residuals.size, CHUNK):
+        if _fits(residuals[start : start + CHUNK], classes[start : start + CHUNK]):
+            continue
+        for i in range(start, min(start + CHUNK, residuals.size)):
+            shift = shift_of(np.int64(classes[i]))
+            for bit in range(shift):
+                bits[at] = (residuals[i] >> bit) & 1
+                at += 1
+            if symbols[i] == 0:
+                listed[far] = residuals[i] >> shift
+                far += 1
     return at, far
 
 
@@ -95,6 +113,12 @@ def low_bits(classes: NDArray[np.uint8]) -> int:
 @inlined
 def join_rest(residuals: Any, classes: Any, bits: Any, listed: Any, places: Any) -> bool:
     """Put listed numbers and low bits of a row back; `places` are the next of each. False where they run out."""
+    lowest, highest = np.int32(0), np.uint8(0)
+    for i in range(residuals.size):
+        lowest = min(lowest, residuals[i])
+        highest = max(highest, classes[i])
+    if lowest > -128 and highest <= DIRECT:
+        return True
     for i in range(residuals.size):
         value = residuals[i]
         if value == -128:

@@ -37,7 +37,7 @@ def gather(
         Plane, row and first column of each.
     out : ndarray of float64, shape (runs, RUN, n + 1)
     """
-    nz, ny, nx = values.shape
+    _, ny, nx = values.shape
     n = len(taps)
     for run in range(len(runs)):
         for pixel in range(RUN):
@@ -75,8 +75,11 @@ def normal_equations(gathered: NDArray[np.float64], run_weights: NDArray[np.floa
             here = gathered[run, pixel]
             for a in range(n):
                 scaled, row = here[a] * weight, out[a]
-                for b in range(n):
+                for b in range(a + 1):
                     row[b] += scaled * here[b]
+    for a in range(n):
+        for b in range(a):
+            out[b, a] = out[a, b]
 
 
 @inlined

@@ -1,7 +1,7 @@
 """One row of all bands at a time: flat loops that the compiler turns into vector instructions.
 
-All arrays are flat; entry ``column * LANES + lane``. What lies to the left of a pixel lies LANES entries before it, so no
-step of a loop waits for the one before. Whole numbers of 32 bits throughout: `stackbound.neighbours` checks that no sum
+All arrays are flat; entry ``column * LANES + lane``. What lies to the left of a pixel lies LANES entries before it, so
+no step of a loop waits for the one before. Whole numbers of 32 bits throughout: `stackbound.neighbours` checks that no sum
 can leave them.
 """
 
@@ -40,7 +40,7 @@ def add_taps(sums: Any, weights: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f:
 
 @inlined
 def sum_taps(sums: Any, decoded: Any, at: Any, weights: Any, half: Any) -> None:
-    """Write the weighted sums of neighbours that begin at entries `at` of `decoded`; their number is a multiple of 8."""
+    """Write the weighted sums of neighbours that begin at entries `at` of `decoded`, a multiple of 8."""
     n = sums.size
     sums[:] = half
     for k in range(0, at.size, 8):
@@ -54,7 +54,7 @@ def sum_taps(sums: Any, decoded: Any, at: Any, weights: Any, half: Any) -> None:
 
 @inlined
 def limits(above: Any, low: Any, high: Any) -> None:
-    """Write the smallest and largest of the three nearest neighbours in the row above (one column more on each side)."""
+    """Write the smallest and largest of the three nearest neighbours in the row above (a column more on each side)."""
     for i in range(low.size):
         a, b, c = above[i], above[i + LANES], above[i + 2 * LANES]
         low[i] = min(min(a, b), c)
@@ -110,7 +110,8 @@ def smooth(residuals: Any, magnitudes: Any, out: Any) -> None:
         magnitudes[n + 2 * LANES + i] = magnitudes[n + LANES + i % LANES]
     for i in range(n):
         out[i] = np.int32(
-            magnitudes[i] + magnitudes[i + 4 * LANES] + (magnitudes[i + LANES] + magnitudes[i + 3 * LANES]) * np.int32(2)
+            magnitudes[i] + magnitudes[i + 4 * LANES]
+            + (magnitudes[i + LANES] + magnitudes[i + 3 * LANES]) * np.int32(2)
             + magnitudes[i + 2 * LANES] * np.int32(3)
         )  # fmt: skip
 

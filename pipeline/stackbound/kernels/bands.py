@@ -28,10 +28,24 @@ def first_row(band: int, rows: int, height: int) -> int:
 
 
 @kernel
+def plane_means(values: NDArray[np.int32], out: NDArray[np.int64]) -> None:
+    """Write the mean of every fourth row of each plane, rounded down."""
+    nz, ny, nx = values.shape
+    for z in range(nz):
+        total, count = 0, 0
+        for y in range(0, ny, 4):
+            row = values[z, y]
+            for x in range(nx):
+                total += row[x]
+            count += nx
+        out[z] = total // count
+
+
+@kernel
 def to_bands(
     values: NDArray[np.int32], predicted: NDArray[np.int32], offsets: NDArray[np.int64], out: NDArray[np.int32]
-) -> tuple[int, int]:
-    """Write values less what is known of them in band layout; return their smallest and largest.
+) -> None:
+    """Write values less what is known of them in band layout.
 
     Parameters
     ----------
@@ -39,25 +53,25 @@ def to_bands(
     predicted : ndarray of int32
         A prediction of the same shape, or an empty array.
     offsets : ndarray of int64, shape (nz,)
-        What to subtract from each plane besides.
+        What to subtract from each plane where nothing is predicted.
     out : ndarray of int32, shape (nz, rows, nx, LANES)
     """
     nz, ny, nx = values.shape
     rows = out.shape[1]
-    lowest, highest = np.int32(2**31 - 1), np.int32(-(2**31))
-    zero = np.zeros(nx, np.int32)
     for z in range(nz):
-        offset = np.int32(offsets[z])
         for y in range(rows):
             target = out[z, y]
             for band in range(LANES):
                 row = min(first_row(band, rows, ny) + y, ny - 1)
-                source, known = values[z, row], predicted[z, row] if predicted.size else zero
-                for x in range(nx):
-                    value = np.int32(source[x] - known[x] - offset)
-                    target[x, band] = value
-                    lowest, highest = min(lowest, value), max(highest, value)
-    return lowest, highest
+                source = values[z, row]
+                if predicted.size:
+                    known = predicted[z, row]
+                    for x in range(nx):
+                        target[x, band] = np.int32(source[x] - known[x])
+                else:
+                    offset = np.int32(offsets[z])
+                    for x in range(nx):
+                        target[x, band] = np.int32(source[x] - offset)
 
 
 @kernel
@@ -68,16 +82,23 @@ def from_bands(
     """Undo `to_bands` and clip to the lattice."""
     nz, ny, nx = out.shape
     rows = decoded.shape[1]
-    zero, top = np.zeros(nx, np.int32), np.int32(span)
+    top = np.int32(span)
     for z in range(nz):
-        offset = np.int32(offsets[z])
-        for band in range(LANES):
-            begin, end = first_row(band, rows, ny), first_row(band + 1, rows, ny)
-            for row in range(begin, end):
-                source, target = decoded[z, row - begin], out[z, row]
-                known = predicted[z, row] if predicted.size else zero
-                for x in range(nx):
-                    target[x] = min(max(np.int32(source[x, band] + known[x] + offset), np.int32(0)), top)
+        for y in range(rows):
+            source = decoded[z, y]
+            for band in range(LANES):
+                row = first_row(band, rows, ny) + y
+                if row >= first_row(band + 1, rows, ny):
+                    continue
+                target = out[z, row]
+                if predicted.size:
+                    known = predicted[z, row]
+                    for x in range(nx):
+                        target[x] = min(max(np.int32(source[x, band] + known[x]), np.int32(0)), top)
+                else:
+                    offset = np.int32(offsets[z])
+                    for x in range(nx):
+                        target[x] = min(max(np.int32(source[x, band] + offset), np.int32(0)), top)
 
 
 @inlined
@@ -203,11 +224,10 @@ def walk(
             r, c = flat_residuals[entry : entry + n], flat_classes[entry : entry + n]
             v = flat_values[number * n : number * n + n]
             if number > 0:
-                classify(
-                    (energy[up : up + n], energy[up - stride : up - stride + n]),
-                    (energy[same - stride : same - stride + n], energy[same : same + n], energy[same + stride : same + stride + n]),
-                    alone or z == 0, scratch, c,
-                )  # fmt: skip
+                above_rows = (energy[up : up + n], energy[up - stride : up - stride + n])
+                upper, lower = same - stride, same + stride
+                before_rows = (energy[upper : upper + n], energy[same : same + n], energy[lower : lower + n])
+                classify(above_rows, before_rows, alone or z == 0, scratch, c)
             d = decoded[row - left : row + n]
             lanes = np.int64(present[number])
             if decode:
