@@ -9,5 +9,5 @@ import numpy as np
 
 
 def crc32c(data: Any, seed: int = 0) -> int:
-    """Return the CRC-32C of `data`, or of what has the CRC-32C `seed` followed by `data` (anything with bytes in one piece)."""
+    """Return the CRC-32C of `data` (bytes in one piece), or of what has the CRC-32C `seed` followed by `data`."""
     return int(google_crc32c.extend(seed, np.frombuffer(data, np.uint8)))

@@ -1,13 +1,17 @@
 """Decode the tiles of a store with numpy alone.
 
-A copy of this file lies in every store beside ``DECODE.txt``, which describes the same bytes in words. It imports nothing
-of stackbound and nothing compiled, so that a store can be read when the program that wrote it can no longer be installed.
-It is slow (about a second for a million pixels) and meant for that day, and as a second opinion in the tests.
+A copy of this file lies in every store beside ``DECODE.txt``, which describes the same bytes in words. It imports
+nothing of stackbound and nothing compiled, so that a store can be read when the program that wrote it can no longer
+be installed. It is slow (about a second for a million pixels) and meant for that day, and as a second opinion in the
+tests.
 
-``decode(payload, shape, dtype)`` returns the pixels of one inner chunk of the array. The chunks lie in shards as the Zarr
-specification of `sharding_indexed` lays down: at a shard's end an index of two little-endian uint64 per chunk, offset and
-length, and a CRC-32C of the index.
+``decode(payload, shape, dtype)`` returns the pixels of one inner chunk of the array. The chunks lie in shards as the
+Zarr specification of `sharding_indexed` lays down: at a shard's end an index of two little-endian uint64 per chunk,
+offset and length, and a CRC-32C of the index.
 """
+
+# This file stands alone: annotations are for readers, and numpy's own types would need casts everywhere.
+# mypy: disable-error-code="no-any-return, import-not-found"
 
 from __future__ import annotations
 
@@ -99,7 +103,7 @@ def golomb(data: bytes, count: int) -> list[int]:
 
 
 def read_tables(reader: Reader, count: int) -> tuple[list[int], list[list[int]]]:
-    """Return the group of each table, and per group 4096 slots: symbol | (slot - start) << 8 | (frequency - 1) << 20."""
+    """Return each table's group, and per group 4096 slots: symbol | (slot - start) << 8 | (frequency - 1) << 20."""
     groups = reader.number(count)
     starts = np.unpackbits(np.frombuffer(reader.take(-(-count // 8)), np.uint8), count=count, bitorder="little")
     group = np.cumsum(starts, dtype=np.int64).tolist()
@@ -539,7 +543,7 @@ def band_classes(energy: NDArray[np.int64]) -> NDArray[np.int64]:
 
 
 def join_bands(plane: NDArray[np.int64], rows: int) -> None:
-    """Fill the rows above and below a finished plane from the bands above and below; the outer ones repeat their own."""
+    """Fill the rows above and below a finished plane from the next bands; the outer ones repeat their own."""
     for k in range(1, HALO + 1):
         source = plane[HALO + max(rows - k, 0)].copy()
         plane[HALO - k, :, 1:], plane[HALO - k, :, 0] = source[:, :-1], plane[HALO, :, 0]

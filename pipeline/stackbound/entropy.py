@@ -16,6 +16,22 @@ TABLES = spread.DIRECT
 HIGHEST_BAND_CLASS = spread.TOP - len(coefficients.RATIOS)
 
 
+class _Split:
+    """Residuals under one choice of classes, and about how many bits they and the classes take."""
+
+    def __init__(self, residuals: NDArray[np.int32], classes: NDArray[np.uint8]) -> None:
+        nz, ny, _ = residuals.shape
+        runs = classes.shape[2]
+        self.symbols = np.empty((nz * ny, runs * spread.CELL), np.uint8)
+        self.run_tables = np.empty((nz * ny, runs), np.uint8)
+        self.histogram = np.zeros((TABLES, tables.SYMBOLS), np.uint32)
+        self.bits, self.listed = spread.split(residuals, classes, self.symbols, self.run_tables, self.histogram)
+        coded = tables.costs(self.histogram, tables.FRACTIONS) + tables.costs(
+            class_counts(classes)[2], tables.FRACTIONS
+        )
+        self.cost = (coded >> 12) + self.bits + 16 * self.listed
+
+
 def encode_residuals(residuals: NDArray[np.int32]) -> bytes:
     """Return the bytes of the residuals of a tile.
 
@@ -24,22 +40,21 @@ def encode_residuals(residuals: NDArray[np.int32]) -> bytes:
     residuals : ndarray of int32, shape (nz, ny, nx)
     """
     nz, ny, nx = residuals.shape
-    classes = np.empty((nz, -(-ny // spread.CELL), -(-nx // spread.CELL)), np.uint8)
-    spread.cell_classes(residuals, classes)
+    own = np.empty((nz, -(-ny // spread.CELL), -(-nx // spread.CELL)), np.uint8)
+    spread.cell_classes(residuals, own)
     writer = Writer()
-    if not classes.any():
+    if not own.any():
         writer.number(0)
         return bytes(writer.data)
     writer.number(1)
+    # Numbers that are alike all over need no class per cell: one for all costs next to nothing to say.
+    alike = np.full_like(own, spread.mean_class(residuals))
+    classes, split = min(((each, _Split(residuals, each)) for each in (own, alike)), key=lambda pair: pair[1].cost)
     _write_classes(writer, classes)
-    runs = classes.shape[2]
-    symbols = np.empty((nz * ny, runs * spread.CELL), np.uint8)
-    run_tables = np.empty((nz * ny, runs), np.uint8)
-    histogram = np.zeros((TABLES, tables.SYMBOLS), np.uint32)
-    bits, listed = spread.split(residuals, classes, symbols, run_tables, histogram)
-    low_bits, far = np.zeros(-(-bits // 8), np.uint8), np.empty(listed, np.int64)
-    if bits or listed:
+    low_bits, far = np.zeros(-(-split.bits // 8), np.uint8), np.empty(split.listed, np.int64)
+    if split.bits or split.listed:
         spread.split_rest(residuals, classes, low_bits, far)
+    symbols, run_tables, histogram = split.symbols, split.run_tables, split.histogram
     group, frequencies = write_tables(writer, histogram)
     _write_words(writer, rans.encode_runs, symbols, _grouped(run_tables, group), nx, frequencies)
     writer.sized(low_bits.tobytes())
@@ -164,11 +179,17 @@ def _grouped(numbers: NDArray[np.uint8], group: NDArray[np.uint8]) -> NDArray[np
     return lookup[numbers]
 
 
-def _write_classes(writer: Writer, classes: NDArray[np.uint8]) -> None:
+def class_counts(classes: NDArray[np.uint8]) -> tuple[NDArray[np.uint8], NDArray[np.uint8], NDArray[np.uint32]]:
+    """Return symbol and context of each class, and how often each symbol occurs in each context."""
     symbols, contexts = np.empty(classes.size, np.uint8), np.empty(classes.size, np.uint8)
     neighbourclass.split(classes, symbols, contexts)
     histogram = np.zeros((neighbourclass.CONTEXTS, tables.SYMBOLS), np.uint32)
     np.add.at(histogram, (contexts, symbols), 1)
+    return symbols, contexts, histogram
+
+
+def _write_classes(writer: Writer, classes: NDArray[np.uint8]) -> None:
+    symbols, contexts, histogram = class_counts(classes)
     group, frequencies = write_tables(writer, histogram)
     padded = np.full(-(-classes.size // 8) * 8, rans.SKIP, np.uint8)
     padded[: classes.size] = group[contexts]
@@ -208,7 +229,7 @@ def read_tables(reader: Reader, count: int = TABLES) -> tuple[NDArray[np.uint8],
     if group[-1] >= groups or tables.from_levels(numbers, groups, frequencies) != numbers.size:
         raise damaged("a frequency table makes no sense")
     slots = np.empty((groups, tables.TOTAL), np.uint32)
-    rans.slots(frequencies, slots)
+    rans.slots(frequencies.astype(np.uint32), slots)
     return group, slots
 
 

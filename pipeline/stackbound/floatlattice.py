@@ -1,9 +1,9 @@
 """The lattice of floating-point pixels.
 
-With a tolerance t, finite pixels become multiples of a step s of their distance from the smallest: s is chosen so that E
-whole steps and the rounding to the lattice (half a step) and to the pixel type (half its spacing) stay within t together.
-The encoder forms the very pixel that the decoder will form and compares it with the original, exactly; what fails, and
-what is not finite, is kept bit for bit as an exception.
+With a tolerance t, finite pixels become multiples of a step s of their distance from the smallest: s is chosen so
+that E whole steps and the rounding to the lattice (half a step) and to the pixel type (half its spacing) stay within
+t together. The encoder forms the very pixel that the decoder will form and compares it with the original, exactly;
+what fails, and what is not finite, is kept bit for bit as an exception.
 
 With a tolerance of zero, or where the spacing of the type is above it, the pixels' bits are mapped to whole numbers in
 the order of the pixels, and those are coded without loss.
@@ -124,11 +124,11 @@ class StepLattice(Lattice):
         """Return which pixels are not finite or further than the tolerance from what they decode to."""
         limit = np.broadcast_to(np.asarray(self.tolerance, np.float64), pixels.shape)
         out = np.empty(pixels.shape, np.bool_)
-        flat = (widened(array).reshape(-1) for array in (pixels, decoded))
+        original, back = widened(pixels).reshape(-1), widened(decoded).reshape(-1)
         if isinstance(self.tolerance, np.ndarray):
-            kernels.outside(*flat, np.ascontiguousarray(limit).reshape(-1), out.reshape(-1))
+            kernels.outside(original, back, np.ascontiguousarray(limit).reshape(-1), out.reshape(-1))
         else:
-            kernels.outside(*flat, np.array([self.tolerance]), out.reshape(-1))
+            kernels.outside(original, back, np.array([self.tolerance]), out.reshape(-1))
         return out
 
     def write(self, writer: Writer) -> None:

@@ -1,9 +1,9 @@
 """The lattice of integer pixels.
 
-Pixels of a tile are counted from the tile's smallest value, so narrow data of a wide type costs no more than narrow data
-of a narrow one. Where the tile's range is too wide for the transform, values are first rounded to multiples of ``2E+1``,
-which uses up the tolerance E, and what is still too wide is cut into pieces of 16 bits, each an array of its own, coded
-without loss.
+Pixels of a tile are counted from the tile's smallest value, so narrow data of a wide type costs no more than narrow
+data of a narrow one. Where the tile's range is too wide for the transform, values are first rounded to multiples of
+``2E+1``, which uses up the tolerance E, and what is still too wide is cut into pieces of 16 bits, each an array of
+its own, coded without loss.
 """
 
 from __future__ import annotations

@@ -245,7 +245,7 @@ def describe(
 
 def _bytes(payload: bytes | memoryview | NDArray[np.uint8]) -> memoryview:
     """Return a payload as bytes in one piece."""
-    return memoryview(np.ascontiguousarray(np.frombuffer(payload, np.uint8)))
+    return memoryview(np.ascontiguousarray(np.frombuffer(payload, np.uint8)).data)
 
 
 def _sealed(body: bytes, pixels: NDArray[Any]) -> bytes:

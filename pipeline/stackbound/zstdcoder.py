@@ -1,4 +1,4 @@
-"""Whole numbers to bytes by byte shuffle and zstd (RFC 8878), for whom speed at low noise or plain tools matter most."""
+"""Whole numbers to bytes by byte shuffle and zstd (RFC 8878), where plain tools matter more than size."""
 
 from __future__ import annotations
 

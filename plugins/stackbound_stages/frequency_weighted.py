@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from pydantic import Field, PositiveFloat, model_validator
-
 from stackbound import hookimpl
 from stackbound.stages import Index, Options, Quantize, Stage
 
@@ -21,7 +20,7 @@ class FrequencyWeightedOptions(Options):
     """The step is multiplied by 1 + slope * f, f being the frequency's distance from the mean, 1 at the highest."""
 
     matrix: list[list[PositiveFloat]] | None = None
-    """Factors per frequency along y (rows) and x (columns) instead; brought to the block's shape between its entries."""
+    """Factors per frequency along y (rows) and x (columns) instead, brought to the block's shape in between."""
 
     @model_validator(mode="after")
     def _rectangular(self) -> FrequencyWeightedOptions:

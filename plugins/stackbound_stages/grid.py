@@ -5,7 +5,6 @@ from __future__ import annotations
 from math import ceil, isqrt, prod
 
 from pydantic import Field, PositiveInt
-
 from stackbound import hookimpl
 from stackbound.errors import UsageError
 from stackbound.stages import Grid, Index, OpenSource, Options, StackInfo, Stage, Tile
@@ -40,7 +39,7 @@ class GridOptions(Options):
 
 
 class TileGrid(Tile):
-    """Tiles of about a million pixels, some planes deep where there are planes; regions of whole planes where they fit."""
+    """Tiles of about a million pixels, some planes deep; regions of whole planes where they fit."""
 
     name = "grid"
     Options = GridOptions

@@ -6,7 +6,6 @@ from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING
 
 from pydantic import Field, field_validator
-
 from stackbound import hookimpl
 from stackbound.errors import ConfigError
 from stackbound.stages import Options, Plan, Predict, Quantize, Stage, Transform

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from pydantic import Field
-
 from stackbound import hookimpl
 from stackbound.stages import Encode, Options, Stage
 

@@ -21,7 +21,7 @@ ENTROPIES = [
 
 @pytest.mark.parametrize(("density", "width", "entropy"), ENTROPIES)
 def test_coder_reaches_entropy(density: str, width: float, entropy: float) -> None:
-    """Independent numbers take at least their entropy less three standard errors, and at most 2 % (and tables) more."""
+    """Independent numbers take at least their entropy less three standard errors, and at most 2 % and tables more."""
     rng = np.random.default_rng(11)
     values = rng.normal(size=2**20) if density == "normal" else rng.laplace(scale=0.5**0.5, size=2**20)
     bins = np.rint(values / width).astype(np.int16).reshape(1024, 1024)
@@ -58,7 +58,7 @@ def test_near_lossless_examples() -> None:
 
 
 def test_range_coding_example() -> None:
-    """One step of the example M = 4, f(A) = 3, f(B) = 1: from state 5, A leads to 6 and B to 23 (Duda, arXiv:1311.2540)."""
+    """M = 4, f(A) = 3, f(B) = 1: from state 5, A leads to 6 and B to 23 (Duda, arXiv:1311.2540)."""
     # The same recurrence at the scale of 12 bits: frequencies 3072 and 1024, from a state 5 * 2**20.
     from stackbound.kernels import rans
 
@@ -80,7 +80,7 @@ def test_range_coding_example() -> None:
 # mean length of the best code for P(k) = (1 - theta) theta**k.
 @pytest.mark.parametrize(("theta", "length"), [(0.5, 2.0), (0.7, 2.96078), (0.9, 4.75583), (0.95, 5.78612)])
 def test_golomb_codes(theta: float, length: float) -> None:
-    """Adapting Golomb-Rice codes come within 5 % of the best fixed parameter for geometric numbers."""
+    """Adapting Golomb-Rice codes come within 8 % of the best fixed parameter for geometric numbers."""
     rng = np.random.default_rng(3)
     folded = rng.geometric(1 - theta, 50_000) - 1
     values = np.where(folded % 2 == 0, folded // 2, -((folded + 1) // 2)).astype(np.int64)
@@ -90,7 +90,7 @@ def test_golomb_codes(theta: float, length: float) -> None:
 
     assert used == golomb.read(bits[:used], back)
     assert np.array_equal(values, back)
-    assert used / values.size < 1.05 * length
+    assert 0.97 * length < used / values.size < 1.08 * length
 
 
 def test_signed_numbers_are_folded() -> None:

@@ -22,7 +22,7 @@ KINDS = ("float16", "float32", "float64")
 
 @st.composite
 def float_pixels(draw: st.DrawFn) -> NDArray[Any]:
-    """Bells, any bits at all, extremes, nasty single values, masks of NaN, and values around the rounding of the type."""
+    """Draw bells, any bits at all, extremes, nasty values, masks of NaN, and values around the rounding of the type."""
     dtype = np.dtype(draw(st.sampled_from(KINDS)))
     shape = draw(st.sampled_from([(1,), (1, 90), (7, 11), (3, 9, 21), (2, 1, 3, 4, 5)]))
     rng = np.random.default_rng(draw(st.integers(0, 2**32)))
@@ -80,7 +80,7 @@ def _assert_within(original: NDArray[Any], decoded: NDArray[Any], tolerance: Any
 @settings(max_examples=200, deadline=None)
 @given(float_pixels(), float_tolerances(), float_coders())
 def test_bound_holds(pixels: NDArray[Any], tolerance: float, coder: TileCoder) -> None:
-    """No finite pixel moves by more than the tolerance in exact arithmetic; NaN, infinities and all else keep their bits."""
+    """In exact arithmetic no finite pixel moves by more than the tolerance; NaN and infinities keep their bits."""
     decoded = decode(coder.encode(pixels, tolerance), pixels.shape, pixels.dtype)
 
     assert decoded.dtype == pixels.dtype
@@ -99,7 +99,7 @@ def test_decoder_of_numpy_alone_agrees(pixels: NDArray[Any], tolerance: float, c
 
 @pytest.mark.parametrize("dtype", KINDS)
 def test_value_on_which_plain_scaling_breaks(dtype: str) -> None:
-    """0.24170587956905365 at 0.001 in float32: rounding to multiples of 0.002 is off by 2e-9 too much; here nothing is."""
+    """0.24170587956905365 at 0.001 in float32: plain rounding to multiples of 0.002 is off by 2e-9 too much."""
     pixels = np.linspace(0.24170587956905365 - 0.4, 0.24170587956905365 + 0.4, 801).astype(dtype)
     pixels[400] = 0.24170587956905365
     decoded = decode(plain_coder().encode(pixels, 0.001), pixels.shape, pixels.dtype)
@@ -152,7 +152,7 @@ def test_wider_tolerance_is_smaller() -> None:
 @settings(max_examples=60, deadline=None)
 @given(st.sampled_from(["uint8", "int16", "int64", "float16", "float32", "float64"]), st.integers(0, 2**32), st.data())
 def test_tolerances_may_differ_from_pixel_to_pixel(dtype: str, seed: int, data: st.DataObject) -> None:
-    """An array of tolerances that broadcasts over the tile holds pixel by pixel, and both decoders need nothing else."""
+    """An array of tolerances that broadcasts over the tile holds pixel by pixel, in both decoders."""
     rng = np.random.default_rng(seed)
     shape = data.draw(st.sampled_from([(3, 9, 21), (12, 17), (2, 3, 5, 8), (1, 40), (2, 1, 6, 7)]))
     lengths = tuple(n if data.draw(st.booleans()) else 1 for n in shape)[data.draw(st.integers(0, len(shape) - 1)) :]

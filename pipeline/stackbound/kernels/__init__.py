@@ -1,2 +1,4 @@
-"""Compiled inner loops of the tile codec, one idea a file; each integer kernel has a plain twin in the tests or in
-`stackbound.decode`."""
+"""Compiled inner loops of the tile codec, one idea a file.
+
+Each integer kernel has a plain twin in `stackbound.decode` or in the tests.
+"""

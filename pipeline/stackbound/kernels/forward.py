@@ -42,4 +42,4 @@ def forward_pass(length: int) -> Callable[[Any], None]:
     """Return the flat forward kernel of one length."""
     from stackbound.kernels import forward_flat
 
-    return getattr(forward_flat, f"forward_{length}")  # type: ignore[no-any-return]
+    return getattr(forward_flat, f"forward_{length}")

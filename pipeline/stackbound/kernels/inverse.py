@@ -31,7 +31,7 @@ def inverse_pass(length: int) -> Callable[[Any], None]:
     """Return the flat inverse kernel of one length."""
     from stackbound.kernels import inverse_flat
 
-    return getattr(inverse_flat, f"inverse_{length}")  # type: ignore[no-any-return]
+    return getattr(inverse_flat, f"inverse_{length}")
 
 
 @kernel

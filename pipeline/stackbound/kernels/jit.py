@@ -8,7 +8,7 @@ from typing import Any, TypeVar
 import numba
 
 Array = Any
-"""An array as a kernel sees it: numba takes its type from the argument, and arithmetic on its numbers is the machine's."""
+"""An array as a kernel sees it: numba takes its type from the argument."""
 
 Function = TypeVar("Function", bound=Callable[..., Any])
 
@@ -24,10 +24,9 @@ def kernel(function: Function) -> Function:
     except RuntimeError:
         # No folder for the cache is writable (containers, clusters): compile anew in each process.
         compiled = numba.njit(nogil=True, error_model="numpy")(function)
-    return compiled  # type: ignore[no-any-return]
+    return compiled
 
 
 def inlined(function: Function) -> Function:
     """Compile a helper that only other kernels call; it becomes part of them and of their cache entry."""
-    compiled = numba.njit(nogil=True, error_model="numpy", inline="never")(function)
-    return compiled  # type: ignore[no-any-return]
+    return numba.njit(nogil=True, error_model="numpy", inline="never")(function)

@@ -81,6 +81,15 @@ def cell_classes(residuals: NDArray[np.int32], out: NDArray[np.uint8]) -> None:
 
 
 @kernel
+def mean_class(residuals: NDArray[np.int32]) -> int:
+    """Return the class of the mean magnitude of all residuals, at least 1."""
+    total, flat = 0, residuals.ravel()
+    for i in range(flat.size):
+        total += abs(np.int64(flat[i]))
+    return max(class_of((min(total, 1 << 50) << UNIT_BITS) // flat.size), 1)
+
+
+@kernel
 def split(
     residuals: NDArray[np.int32],
     classes: NDArray[np.uint8],

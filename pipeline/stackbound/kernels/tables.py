@@ -1,7 +1,7 @@
 """Static frequency tables: from counts to 12-bit frequencies, which tables to share, and how they are written.
 
-A frequency is sent as a level, exact below 16 and with eight levels an octave above (0.0005 bit per symbol lost), as the
-difference from the level before. The decoder scales the levels' values to a sum of 2**12.
+A frequency is sent as a level, exact below 16 and with eight levels an octave above (0.0005 bit per symbol lost), as
+the difference from the level before. The decoder scales the levels' values to a sum of 2**12.
 """
 
 from __future__ import annotations
@@ -77,6 +77,15 @@ def cost(counts: Any, fractions: Any) -> int:
             bits += counts[symbol] * min(whole - log2_fixed(np.int64(counts[symbol]), fractions), 12 << 12)
     span = last - first + 1
     return bits + ((16 + span * 5 // 2) << 12)
+
+
+@kernel
+def costs(histogram: NDArray[np.uint32], fractions: NDArray[np.int64]) -> int:
+    """Return about how many bits (in units of 2**-12) the symbols counted under several tables take."""
+    total = 0
+    for table in range(histogram.shape[0]):
+        total += cost(histogram[table], fractions)
+    return total
 
 
 @kernel
