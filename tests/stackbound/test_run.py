@@ -21,6 +21,7 @@ from stackbound.errors import (
     TileError,
     UsageError,
 )
+from stackbound.sources import open_source
 from stackbound.stages import Grid, StackInfo
 
 from .conftest import GRID, contents, records
@@ -75,7 +76,8 @@ def test_small_stacks(save_npy, tmp_path, shape, tolerance, seed):
 def test_same_bytes_whatever_the_workers(kept, tmp_path):
     """Workers, memory and the target's name leave no trace in the store."""
     source, store, root = kept
-    least = budget.needed(1, 1, StackInfo("", "zyx", (6, 100, 120), np.dtype("u2")), Grid((2, 32, 32), (4, 64, 64)))
+    with open_source(source) as opened:
+        least = budget.needed(1, 1, opened.info, Grid((2, 32, 32), (4, 64, 64)))
     for workers, memory, name in ((1, "1GiB", "a.ome.zarr"), (4, "200MiB", "other name.zarr"), (2, least, "c")):
         report = compress(source, tmp_path / name, workers=workers, memory=memory)
 
