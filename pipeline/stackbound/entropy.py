@@ -205,10 +205,12 @@ def _read_classes(reader: Reader, classes: NDArray[np.uint8]) -> None:
         raise damaged("the classes do not end where they should")
 
 
-def write_tables(writer: Writer, histogram: NDArray[np.uint32]) -> tuple[NDArray[np.uint8], NDArray[np.int64]]:
+def write_tables(
+    writer: Writer, histogram: NDArray[np.uint32], most: int = 256
+) -> tuple[NDArray[np.uint8], NDArray[np.int64]]:
     """Write the tables for a histogram; return the group of each table and the frequencies of each group."""
     group = np.zeros(len(histogram), np.uint8)
-    groups = tables.share(histogram, group, tables.FRACTIONS)
+    groups = tables.share(histogram, group, tables.FRACTIONS, most)
     frequencies = histogram[:groups].astype(np.int64)
     numbers = np.empty(groups * (tables.SYMBOLS + 2), np.int64)
     count = tables.levels(frequencies, groups, numbers)

@@ -174,7 +174,7 @@ def _index_bits(indices: NDArray[np.int32]) -> float:
     used = used[(used > 0) & (used < blocks)]
     shares = used / blocks
     zeros = -blocks * float((shares * np.log2(shares) + (1 - shares) * np.log2(1 - shares)).sum())
-    return zeros + float((1 + 2 * np.log2(magnitudes[magnitudes > 0])).sum())
+    return float(zeros + (1 + 2 * np.log2(magnitudes[magnitudes > 0])).sum())
 
 
 def _pieces(tiles: Sequence[LatticeTile]) -> list[LatticeTile]:

@@ -52,9 +52,12 @@ def _fits(residuals: Any, classes: Any) -> bool:
 
 @kernel
 def split(
-    residuals: NDArray[np.int32], classes: NDArray[np.uint8], symbols: NDArray[np.uint8], counts: NDArray[np.uint32]
-) -> bool:
+    residuals: NDArray[np.int32], classes: NDArray[np.uint8], present: NDArray[np.uint8], row: int,
+    symbols: NDArray[np.uint8], counts: NDArray[np.uint32],
+) -> bool:  # fmt: skip
     """Write the symbol of each residual and count symbols per class into `counts` (2, CLASSES * 256).
+
+    Parameters as those of `encode`.
 
     Returns
     -------
@@ -64,8 +67,9 @@ def split(
     wide = False
     # Two counters each, so that equal symbols side by side do not wait for each other.
     even, odd = counts[0], counts[1]
-    for start in range(0, residuals.size, CHUNK):
-        r, c, s = residuals[start : start + CHUNK], classes[start : start + CHUNK], symbols[start : start + CHUNK]
+    for number in range(present.size):
+        part = slice(number * row, (number + 1) * row)
+        r, c, s = residuals[part], classes[part], symbols[part]
         if _fits(r, c):
             for i in range(r.size):
                 s[i] = np.int32(r[i] + np.int32(128))
@@ -74,9 +78,14 @@ def split(
             for i in range(r.size):
                 value = (r[i] >> shift_of(np.int64(c[i]))) + 128
                 s[i] = value if 0 < value < 256 else 0
-        for i in range(0, r.size, 2):
-            even[(np.int64(c[i]) << 8) + np.int64(s[i])] += np.uint32(1)
-            odd[(np.int64(c[i + 1]) << 8) + np.int64(s[i + 1])] += np.uint32(1)
+        if present[number] == LANES:
+            for i in range(0, r.size, 2):
+                even[(np.int64(c[i]) << 8) + np.int64(s[i])] += np.uint32(1)
+                odd[(np.int64(c[i + 1]) << 8) + np.int64(s[i + 1])] += np.uint32(1)
+        else:
+            for i in range(r.size):
+                if i % LANES < present[number]:
+                    even[(np.int64(c[i]) << 8) + np.int64(s[i])] += np.uint32(1)
     return wide
 
 

@@ -1,8 +1,8 @@
 """One row of all bands at a time: flat loops that the compiler turns into vector instructions.
 
 All arrays are flat; entry ``column * LANES + lane``. What lies to the left of a pixel lies LANES entries before it, so
-no step of a loop waits for the one before. Whole numbers of 32 bits throughout: `stackbound.neighbours` checks that no sum
-can leave them.
+no step of a loop waits for the one before. Whole numbers of 32 bits throughout; `stackbound.neighbours` sees to it that
+no sum can leave them.
 """
 
 from __future__ import annotations

@@ -89,7 +89,9 @@ def costs(histogram: NDArray[np.uint32], fractions: NDArray[np.int64]) -> int:
 
 
 @kernel
-def share(histogram: NDArray[np.uint32], group: NDArray[np.uint8], fractions: NDArray[np.int64]) -> int:
+def share(
+    histogram: NDArray[np.uint32], group: NDArray[np.uint8], fractions: NDArray[np.int64], most: int = 256
+) -> int:
     """Merge neighbouring tables while that saves bits; `histogram` becomes one row per group.
 
     Parameters
@@ -97,6 +99,8 @@ def share(histogram: NDArray[np.uint32], group: NDArray[np.uint8], fractions: ND
     histogram : ndarray of uint32, shape (tables, 256)
     group : ndarray of uint8, shape (tables,)
         Receives the group of each table; tables without symbols join the group before them.
+    most : int
+        Tables are merged at a loss until there are no more than this: fewer stay in the processor's nearest cache.
 
     Returns
     -------
@@ -104,41 +108,48 @@ def share(histogram: NDArray[np.uint32], group: NDArray[np.uint8], fractions: ND
         How many groups there are, at least 1.
     """
     tables = histogram.shape[0]
-    merged = np.empty(histogram.shape[1], np.uint32)
-    costs = np.zeros(tables, np.int64)
+    costs, gains = np.zeros(tables, np.int64), np.zeros(tables, np.int64)
+    both = np.empty(histogram.shape[1], np.uint32)
     members = 0
     for table in range(tables):
-        if histogram[table].sum() > 0:
-            if members != table:
-                histogram[members] = histogram[table]
+        used = False
+        for symbol in range(histogram.shape[1]):
+            used |= histogram[table, symbol] > 0
+        if used:
+            for symbol in range(histogram.shape[1]):
+                histogram[members, symbol] = histogram[table, symbol]
             costs[members] = cost(histogram[members], fractions)
-            group[table] = members
             members += 1
-        else:
-            group[table] = members - 1 if members else 0
-    gains = np.full(tables, -(2**62), np.int64)
+        group[table] = max(members - 1, 0)
     for left in range(members - 1):
-        merged[:] = histogram[left] + histogram[left + 1]
-        gains[left] = costs[left] + costs[left + 1] - cost(merged, fractions)
+        gains[left] = _gain(histogram, left, costs, fractions, both)
     while members > 1:
         left = 0
         for at in range(1, members - 1):
-            if gains[at] > gains[left]:
-                left = at
+            left = at if gains[at] > gains[left] else left
         if gains[left] <= 0:
             break
-        histogram[left] += histogram[left + 1]
+        for symbol in range(histogram.shape[1]):
+            histogram[left, symbol] += histogram[left + 1, symbol]
         costs[left] = cost(histogram[left], fractions)
-        for at in range(left + 1, members - 1):
-            histogram[at], costs[at], gains[at] = histogram[at + 1], costs[at + 1], gains[at + 1]
         members -= 1
+        for at in range(left + 1, members):
+            costs[at], gains[at] = costs[at + 1], gains[at + 1]
+            for symbol in range(histogram.shape[1]):
+                histogram[at, symbol] = histogram[at + 1, symbol]
         for table in range(tables):
-            if group[table] > left:
-                group[table] -= 1
+            group[table] -= 1 if group[table] > left else 0
         for at in range(max(0, left - 1), min(left + 1, members - 1)):
-            merged[:] = histogram[at] + histogram[at + 1]
-            gains[at] = costs[at] + costs[at + 1] - cost(merged, fractions)
+            gains[at] = _gain(histogram, at, costs, fractions, both)
     return max(1, members)
+
+
+@inlined
+def _gain(histogram: Any, left: int, costs: Any, fractions: Any, both: Any) -> int:
+    """Return how many bits (in units of 2**-12) it saves to share one table between a group and the next."""
+    for symbol in range(both.size):
+        both[symbol] = histogram[left, symbol] + histogram[left + 1, symbol]
+    return costs[left] + costs[left + 1] - cost(both, fractions)
 
 
 @kernel
