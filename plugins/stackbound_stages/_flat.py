@@ -42,7 +42,7 @@ class FlatPixels:
     @property
     def overhead(self) -> int:
         """Bytes that `fill` may hold beside `out`."""
-        return PIECE
+        return min(PIECE, prod(self.shape) * self.dtype.itemsize)
 
     def fill(self, start: Index, stop: Index, out: NDArray[Any]) -> None:
         """Read a box into `out`, an array of its shape, of any strides, in native byte order."""
