@@ -67,6 +67,7 @@ def parse(arguments: list[str] | None) -> argparse.Namespace:
     parser.add_argument("folder", type=Path, help="each sub-folder or image file in it is one stack")
     parser.add_argument("--only", action="append", metavar="NAME", help="only this stack (may be repeated)")
     parser.add_argument("--synthetic", action="store_true", help="with --only: the synthetic camera stacks as well")
+    parser.add_argument("--real-only", action="store_true", help="leave the synthetic camera stacks out")
     parser.add_argument(
         "--tolerances", default="0,0.5,1,2", metavar="M,M,...", help="multiples of the measured noise [%(default)s]"
     )
@@ -122,7 +123,7 @@ def chosen_stacks(options: argparse.Namespace) -> Iterator[Stack]:
     for path in find(options.folder):
         if not options.only or path.name in options.only:
             yield load(path)
-    if options.synthetic or not options.only:
+    if options.synthetic or not (options.only or options.real_only):
         yield from synthetic()
 
 
