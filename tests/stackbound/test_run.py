@@ -173,23 +173,24 @@ def test_a_source_that_changes_is_refused(save_npy, pixels, tmp_path):
 
 
 def test_progress(kept, tmp_path, pixels):
-    """Progress is told in pixels and adds up to all of them."""
-    seen = []
+    """Each part of a run that takes time is told, adds up to its total and is ended; the regions count in pixels."""
+    parts = []
 
     class Watch:
         def start(self, what, total):
-            seen.append(total)
+            parts.append([what, total, 0, "open"])
 
         def advance(self, n):
-            seen.append(-n)
+            parts[-1][2] += n
 
         def end(self):
-            seen.append(0)
+            parts[-1][3] = "ended"
 
     compress(kept[0], tmp_path / "s", progress=Watch())
 
-    assert pixels.size == seen[0]
-    assert 0 == sum(seen) == seen[-1]
+    assert ["planning", "compressing"] == [what for what, *_ in parts]
+    assert all(total == done and state == "ended" for _, total, done, state in parts)
+    assert pixels.size == parts[-1][1]
 
 
 def test_what_the_disk_holds_is_compared(kept, tmp_path, monkeypatch):
