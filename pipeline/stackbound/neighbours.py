@@ -150,7 +150,7 @@ def encode(
         writer.number(offset)
     writer.number(walked.first_class)
     present = _present(len(values), values.shape[1])
-    _write_residuals(writer, walked.residuals.reshape(-1), walked.classes.reshape(-1), present, values.shape[2] * LANES)
+    _write_residuals(writer, walked.residuals, walked.classes, present, values.shape[2] * LANES)
     out = np.empty(values.shape, np.int32)
     bands.from_bands(walked.decoded, predicted, walked.offsets, span, out)
     return bytes(writer.data), out
@@ -161,7 +161,7 @@ def estimate(
 ) -> float:
     """Return about how many bits the residuals of a tile take: their entropy by class, without tables."""
     walked = _walk(values, predicted, how, tolerance, span)
-    classes, residuals = walked.classes.reshape(-1), walked.residuals.reshape(-1)
+    classes, residuals = walked.classes, walked.residuals
     counts = np.zeros((2, CLASSES * tables.SYMBOLS), np.uint32)
     symbols, present = np.empty(residuals.shape, np.uint8), _present(len(values), values.shape[1])
     wide = bandcode.split(residuals, classes, present, values.shape[2] * LANES, symbols, counts)
@@ -193,10 +193,10 @@ def _walk(
     bands.to_bands(values, predicted, offsets, banded)
     bottom, top = _range(offsets, predicted, span)
     checked = check(how, bottom, top)
-    residuals, classes = np.empty(banded.shape, np.int32), np.empty(banded.shape, np.uint8)
+    residuals, classes = np.empty(banded.size, np.int32), np.empty(banded.size, np.uint8)
     first_class = bands.walk(
-        banded, residuals, classes, _present(nz, ny), checked.taps, checked.weights, checked.left, SHIFT,
-        checked.alone, checked.clamped, 2 * tolerance + 1, bottom, top, False, 0, *_NO_BYTES,
+        banded, residuals, classes, _present(nz, ny), checked.taps, checked.weights, checked.left, SHIFT, checked.alone,
+        checked.clamped, 2 * tolerance + 1, bottom, top, False, 0, *_NO_BYTES,
     )  # fmt: skip
     return _Walked(checked, offsets, banded, residuals, classes, first_class)
 

@@ -177,7 +177,8 @@ def encode(
     position = words.size
     places = np.empty(LANES, np.int64)
     spans = np.empty(LANES, np.uint64)
-    states[:] = LOW
+    for lane in range(LANES):
+        states[lane] = LOW
     for group in range(symbols.size - LANES, -1, -LANES):
         lanes = np.int64(present[group // row])
         c, s = classes[group : group + LANES], symbols[group : group + LANES]

@@ -68,7 +68,9 @@ def squared_errors(gathered: NDArray[np.float64], weights: NDArray[np.float64], 
 def normal_equations(gathered: NDArray[np.float64], run_weights: NDArray[np.float64], out: NDArray[np.float64]) -> None:
     """Write the weighted sum of products of all neighbours and the pixel, shape (n + 1, n + 1)."""
     n = out.shape[0]
-    out[:] = 0.0
+    for a in range(n):
+        for b in range(n):
+            out[a, b] = 0.0
     for run in range(gathered.shape[0]):
         weight = run_weights[run]
         for pixel in range(gathered.shape[1]):
@@ -115,9 +117,10 @@ def solve(
     out : ndarray of float64, shape (n,)
     """
     n, last = chosen.size, products.shape[0] - 1
-    factor = np.zeros((n, n))
-    free, ones = np.empty(n), np.ones(n)
+    factor = np.empty((n, n))
+    free, ones = np.empty(n), np.empty(n)
     for i in range(n):
+        ones[i] = 1.0
         free[i] = products[chosen[i], last]
         for j in range(i + 1):
             value = products[chosen[i], chosen[j]] + (noise if i == j else 0.0)
@@ -132,7 +135,12 @@ def solve(
     if whole:
         # Lagrange's multiplier: the sum of the weights is 1.
         _substitute(factor, ones)
-        share = (1.0 - free.sum()) / ones.sum()
-    out[:] = 0.0
+        missing, per_share = 1.0, 0.0
+        for i in range(n):
+            missing -= free[i]
+            per_share += ones[i]
+        share = missing / per_share
+    for i in range(out.size):
+        out[i] = 0.0
     for i in range(n):
         out[chosen[i]] = free[i] + share * ones[i]

@@ -29,6 +29,20 @@ FARTHEST = np.int32(65535)
 
 
 @inlined
+def fill(target: Any, value: Any) -> None:
+    """Write one value everywhere: a loop compiles in a fraction of the time of a slice assignment."""
+    for i in range(target.size):
+        target[i] = value
+
+
+@inlined
+def copy(target: Any, source: Any) -> None:
+    """Write `source` to `target`; they do not overlap."""
+    for i in range(target.size):
+        target[i] = source[i]
+
+
+@inlined
 def add_taps(sums: Any, weights: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f: Any, g: Any, h: Any) -> None:
     """Add eight weighted neighbours to the sums of a row."""
     w0, w1, w2, w3, w4, w5, w6, w7 = (
@@ -42,7 +56,7 @@ def add_taps(sums: Any, weights: Any, a: Any, b: Any, c: Any, d: Any, e: Any, f:
 def sum_taps(sums: Any, decoded: Any, at: Any, weights: Any, half: Any) -> None:
     """Write the weighted sums of neighbours that begin at entries `at` of `decoded`, a multiple of 8."""
     n = sums.size
-    sums[:] = half
+    fill(sums, half)
     for k in range(0, at.size, 8):
         add_taps(
             sums, weights[k : k + 8],

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackbound.kernels.bandcode import decode_row, join_rest
-from stackbound.kernels.bandrows import LANES, classify, limits, quantize, rebuild, smooth, sum_taps
+from stackbound.kernels.bandrows import LANES, classify, copy, fill, limits, quantize, rebuild, smooth, sum_taps
 from stackbound.kernels.jit import inlined, kernel
 
 HALO = 3
@@ -159,8 +159,8 @@ def walk(
     ----------
     values : ndarray of int32, shape (nz, rows, nx, LANES)
         Band layout. What to code when encoding; becomes what is decoded.
-    residuals : ndarray of int32
-        Same shape when encoding, which writes all; one row (nx * LANES,) when decoding.
+    residuals : ndarray of int32, flat
+        As many entries when encoding, which writes all; one row (nx * LANES) when decoding.
     classes : ndarray of uint8
         As `residuals`.
     present : ndarray of uint8, shape (nz * rows,)
@@ -198,15 +198,16 @@ def walk(
     begin, entries, places = np.empty(len(taps), np.int64), np.empty(LANES, np.uint32), np.zeros(2, np.int64)
     shift32, width32, bottom32, top32 = np.int32(shift), np.int32(width), np.int32(bottom), np.int32(top)
     half = np.int32((1 << shift) >> 1)
-    flat_values, flat_residuals, flat_classes = values.reshape(-1), residuals.reshape(-1), classes.reshape(-1)
+    flat_values = values.reshape(-1)
     wide = bits.size > 0 or listed.size > 0
     used = 0
     for z in range(nz):
         first = (z & 1) * plane + above + left
         before = (1 - (z & 1)) * plane + above + left
         if z > 0:
-            decoded[first - left - above : first - left] = decoded[before - left - above : before - left]
-            energy[first - left - above : first - left] = energy[before - left - above : before - left]
+            start, known = first - left - above, before - left - above
+            copy(decoded[start : start + above], decoded[known : known + above])
+            copy(energy[start : start + above], energy[known : known + above])
         for y in range(rows):
             row = first + y * stride
             up, same = row - stride, before + y * stride
@@ -218,10 +219,11 @@ def walk(
             if clamped and y > 0:
                 limits(decoded[up - LANES : up + n + LANES], low, high)
             else:
-                low[:], high[:] = bottom32, top32
+                fill(low, bottom32)
+                fill(high, top32)
             number = z * rows + y
             entry = 0 if decode else number * n
-            r, c = flat_residuals[entry : entry + n], flat_classes[entry : entry + n]
+            r, c = residuals[entry : entry + n], classes[entry : entry + n]
             v = flat_values[number * n : number * n + n]
             if number > 0:
                 above_rows = (energy[up : up + n], energy[up - stride : up - stride + n])
@@ -232,33 +234,32 @@ def walk(
             lanes = np.int64(present[number])
             if decode:
                 if number == 0:
-                    c[:] = first_class
+                    fill(c, first_class)
                 used = decode_row(c, lanes, tables, slots, words, used, states, entries, r)
                 if used < 0 or (wide and not join_rest(r, c, bits, listed, places)):
                     return -1
                 rebuild(r, sums, serial[kind], shift32, width32, low, high, bottom32, top32, d)
-                v[:] = d[left:]
+                copy(v, d[left:])
             else:
                 quantize(
                     v, sums, serial[kind], shift32, width32, low, high, bottom32, top32, scratch, r, d
                 )  # fmt: skip
                 if lanes < LANES:
                     for i in range(0, n, LANES):
-                        r[i + lanes : i + LANES] = 0
+                        fill(r[i + lanes : i + LANES], 0)
                     rebuild(r, sums, serial[kind], shift32, width32, low, high, bottom32, top32, d)
-                v[:] = d[left:]
+                copy(v, d[left:])
                 if number == 0:
                     first_class = _mean_class(r)
-                    c[:] = first_class
+                    fill(c, first_class)
             smooth(r, magnitudes, energy[row : row + n])
             _beyond(decoded, row, nx)
             if y == 0:
                 for k in range(1, HALO + 1):
-                    decoded[row - k * stride - left : row - k * stride - left + stride] = decoded[
-                        row - left : row - left + stride
-                    ]
+                    start = row - left
+                    copy(decoded[start - k * stride : start - k * stride + stride], decoded[start : start + stride])
                     if z == 0:
-                        energy[row - k * stride : row - k * stride + n] = energy[row : row + n]
+                        copy(energy[row - k * stride : row - k * stride + n], energy[row : row + n])
         if z + 1 < nz:
             _neighbour_rows(decoded, first - left, stride, rows)
             _neighbour_rows(energy, first - left, stride, rows)
