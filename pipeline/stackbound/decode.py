@@ -471,7 +471,9 @@ def read_bands(
     taps = np.array(read_numbers(reader, 3 * count), np.int64).reshape(-1, 3)
     weights = np.array(read_numbers(reader, 4 * (count + 3)), np.int64).reshape(4, -1)
     offsets = np.array([0 if base is not None else reader.number(span) for _ in range(nz)])
-    bottom, top, first_class = reader.signed(), reader.signed(), reader.number(51)
+    first_class = reader.number(51)
+    # The smallest and largest number that there can be in the bands.
+    bottom, top = (-span, span) if base is not None else (-int(offsets.max()), span - int(offsets.min()))
     known = ((taps[:, 0] == 0) & (taps[:, 1] < 0)) | (taps[:, 0] == -1)
     reach = int(np.abs(weights).sum(1).max()) * max(abs(bottom), abs(top), 1) if weights.size else 0
     if not known.all() or np.abs(taps).max(initial=0) > HALO or bottom > top or reach + 4096 >= 2**31:

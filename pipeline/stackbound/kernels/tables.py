@@ -127,7 +127,7 @@ def share(
         left = 0
         for at in range(1, members - 1):
             left = at if gains[at] > gains[left] else left
-        if gains[left] <= 0:
+        if gains[left] <= 0 and members <= most:
             break
         for symbol in range(histogram.shape[1]):
             histogram[left, symbol] += histogram[left + 1, symbol]
