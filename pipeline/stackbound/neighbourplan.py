@@ -25,6 +25,9 @@ FEWEST, MOST = 12_000, 150_000
 STEPS = (6.0, 9.0)
 """Steps of the base that are tried, in units of what the neighbours alone leave: only lasting structure pays."""
 
+DIFFERENT = 0.998
+"""A switch must save 0.2 % of a small sample, or it is chance."""
+
 WORTH = 0.99
 """A base must save 1 %: it takes as long as all the rest."""
 
@@ -89,7 +92,7 @@ def search(
         trials.append(lambda: replace(setup, clamped=True))
     for trial in trials:
         tried = trial()
-        if (bits := measure(tried)) < least:
+        if (bits := measure(tried)) < DIFFERENT * least:
             setup, least = tried, bits
     if fixed.base and transform is not None and quantize is not None:
         setup = _with_base(setup, least, usable, pieces, deep, transform, quantize, measure)

@@ -33,10 +33,10 @@ FARTHER = [(0, -2, -2), (0, -2, 2), (0, -1, -3), (0, -1, 3), (0, -3, -1), (0, -3
 FARTHEST = [(0, -3, -2), (0, -3, 2), (0, -3, -3), (0, -3, 3)]
 BEFORE = [
     (-1, 0, 0), (-1, 0, -1), (-1, 0, 1), (-1, -1, 0), (-1, 1, 0), (-1, -1, -1), (-1, -1, 1), (-1, 1, -1), (-1, 1, 1),
-    (-1, 0, -2), (-1, 0, 2), (-1, -2, 0), (-1, 2, 0),
+    (-1, 0, -2), (-1, 0, 2),
 ]  # fmt: skip
 PLANE_TAPS = ABOVE + FARTHER + FARTHEST
-STACK_TAPS = ABOVE + FARTHER[:2] + BEFORE
+STACK_TAPS = ABOVE + FARTHER + FARTHEST + BEFORE
 
 FEWEST_RUNS, MOST_RUNS, PIXELS_PER_RUN = 192, 512, 4096
 """Runs of pixels on which weights are fitted: some hundred pixels per weight, and a small share of the tiles."""
