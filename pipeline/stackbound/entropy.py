@@ -120,7 +120,8 @@ def encode_indices(indices: NDArray[np.int32], block: tuple[int, int, int], grid
     # The most low bits that the classes above each band's allow.
     tops = np.maximum(classes + len(coefficients.RATIOS) - coefficients.BELOW - spread.DIRECT + 1, 0) // 2
     low_bits = np.zeros(int((tops[order.bands] * sizes).sum()) // 8 + 1, np.uint8)
-    listed = np.empty(symbols.size, np.int64)
+    # Only what is beyond a symbol by itself can be listed.
+    listed = np.empty(int(np.count_nonzero(work > 127) + np.count_nonzero(work < -127)), np.int64)
     size, bits, far = coefficients.split_indices(
         work, order.order, order.neighbours, order.weights, order.bands, classes, _means(order, classes),
         np.array(grid), last, symbols, tabs, histogram, low_bits, listed,

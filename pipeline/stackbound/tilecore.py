@@ -167,8 +167,9 @@ def check(prediction: BlockPrediction, tile: LatticeTile) -> BlockPrediction:
             raise PluginError(f"the transform's basis {base!r} is not known to decoders")
     if not exact(block, prediction.bases):
         raise PluginError("the transform's basis functions are so large that the inverse would not be exact")
-    clipped = np.clip(indices.reshape(prod(block), -1)[:, :blocks], -INDEX_LIMIT, INDEX_LIMIT).astype(np.int32)
-    return BlockPrediction(block, prediction.bases, steps.astype(np.int64), clipped.reshape(*block, blocks))
+    if indices.dtype != np.int32 or indices.min() < -INDEX_LIMIT or indices.max() > INDEX_LIMIT:
+        indices = np.clip(indices, -INDEX_LIMIT, INDEX_LIMIT).astype(np.int32)
+    return BlockPrediction(block, prediction.bases, steps.astype(np.int64), indices[..., :blocks])
 
 
 def exact(block: tuple[int, ...], bases: tuple[str | NDArray[np.int64], ...]) -> bool:
