@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,6 +13,7 @@ from numpy.typing import NDArray
 from stackbound.errors import SourceError
 from stackbound.stages import Index, SourceFile
 
+from ._descriptions import pack
 from ._flat import PIECE, FlatPixels
 from ._stored import Pixels, look_at
 from ._tiff_ifd import CUT, Page, PageTable, read_page_table
@@ -111,16 +111,16 @@ def spread_planes(series: tifffile.TiffPageSeries, shape: Index, name: str) -> t
 
 
 def plane_texts(planes: Iterable[tuple[Path, Page]]) -> bytes | None:
-    """Return the description of every plane, one JSON text a line; None where only the first plane has one, or none."""
+    """Return the descriptions of all planes, packed; None where only the first plane has one, or none."""
     located = list(planes)
     if not any(page.text for _, page in located[1:]):
         return None
-    lines = []
+    texts = []
     for path, page in located:
         text = ""
         if page.text is not None:
             with path.open("rb") as file:
                 file.seek(page.text[0])
                 text = file.read(page.text[1]).rstrip(b"\0").decode("utf-8", "backslashreplace")
-        lines.append(json.dumps(text, ensure_ascii=False))
-    return "\n".join(lines).encode() + b"\n"
+        texts.append(text)
+    return pack(texts)

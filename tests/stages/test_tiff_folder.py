@@ -6,9 +6,12 @@ from typing import Any
 import numpy as np
 import pytest
 import tifffile
+from hypothesis import given
+from hypothesis import strategies as st
 from stackbound.errors import SourceError
 from stackbound.sources import open_source
 from stackbound.stages import StackInfo
+from stackbound_stages._descriptions import pack, unpack
 
 RNG = np.random.default_rng(7)
 FIVE = RNG.integers(0, 4000, (2, 3, 5, 24, 32)).astype(np.uint16)
@@ -177,5 +180,19 @@ def test_descriptions_of_all_planes_are_kept(tmp_path: Path) -> None:
 
     for source in (tmp_path / "f", tmp_path / "a.tif"):
         info, _ = loaded(source)
-        lines = info.headers["plane-descriptions.jsonl"].decode().splitlines()
-        assert [f'"plane {number} µ"' for number in range(5)] == lines
+        assert [f"plane {number} µ" for number in range(5)] == unpack(info.headers["plane-descriptions.jsonl"])
+
+
+@given(st.lists(st.text("ab; \n\u2028é", max_size=30), max_size=5))
+def test_packed_descriptions_come_back(texts: list[str]) -> None:
+    """Descriptions come back letter by letter, whatever they repeat of the plane before."""
+    assert texts == unpack(pack(texts))
+
+
+def test_repeated_settings_are_kept_once() -> None:
+    """A plane that repeats the settings of the one before costs little more than what differs."""
+    settings = "exposure 15 ms; binning 4; " * 100
+
+    packed = pack([settings + f"z {number}; end" for number in range(10)])
+
+    assert len(packed) < 1.2 * len(settings)
