@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import json
 import os
 import signal
@@ -401,7 +402,9 @@ def test_interruption_is_exit_code_130_and_no_store(here):
     """Ctrl-C ends a run at once with 130 and without a traceback; nothing stands under the final name."""
     np.save("big.npy", pixels(24, 1024, 1024))
     command = [sys.executable, "-m", "stackbound.cli", "compress", "big.npy", "big.ome.zarr", "--tolerance", "1"]
-    with subprocess.Popen(command, stderr=subprocess.PIPE, text=True) as run:
+    # A shell starts background jobs with the signal ignored, and children inherit that.
+    listening = functools.partial(signal.signal, signal.SIGINT, signal.SIG_DFL)
+    with subprocess.Popen(command, stderr=subprocess.PIPE, text=True, preexec_fn=listening) as run:
         while run.poll() is None and not (here / "big.ome.zarr.partial").exists():
             time.sleep(0.01)
         run.send_signal(signal.SIGINT)
