@@ -17,7 +17,7 @@ import jpeg_ls
 import numpy as np
 import zstandard
 from numpy.typing import NDArray
-from stackbound.config import build, read_config
+from stackbound.config import Pipeline, build, read_config
 from stackbound.errors import StackboundError
 from stackbound.geometry import Box, counts, whole_boxes
 from stackbound.plugins import registry
@@ -64,14 +64,21 @@ class TileCodec(Coder):
     def __init__(self, name: str, config: Mapping[str, Any] | str | None = None) -> None:
         self.name = name
         self.config = config
+        self._pipelines: dict[float, Pipeline] = {}
+
+    def _pipeline(self, tolerance: float) -> Pipeline:
+        # Reading a configuration takes tens of milliseconds whatever the stack: not a part of coding, so it is kept.
+        if tolerance not in self._pipelines:
+            # The shortest decimal that reads back to the same number: what a user would type.
+            self._pipelines[tolerance] = build(read_config(self.config, tolerance=repr(tolerance)), registry())
+        return self._pipelines[tolerance]
 
     def encode(self, stack: Stack, tolerance: float) -> Encoded:
         """Plan on a sample of whole tiles as a run does, then code tile by tile."""
         shape = stack.pixels.shape
         whole = Box((0,) * len(shape), shape)
         try:
-            # The shortest decimal that reads back to the same number: what a user would type.
-            pipeline = build(read_config(self.config, tolerance=repr(tolerance)), registry())
+            pipeline = self._pipeline(tolerance)
             self._grid = pipeline.tile.grid(stack.info)
             sample = [tile for _, tile in sample_tiles(InMemory(stack), stack.info, self._grid)]
             began = time.process_time()
