@@ -36,7 +36,7 @@ class SSIM(Verify):
             raise ConfigError(
                 "The figure 'ssim' needs scikit-image, which is not installed.",
                 where="verify.figures",
-                remedy="pip install scikit-image, or leave the figure out.",
+                remedy="Install stackbound with the extra 'ssim', or leave the figure out.",
             )
 
     def measure(self, original: NDArray[Any], decoded: NDArray[Any], info: StackInfo) -> tuple[Fraction, int]:
