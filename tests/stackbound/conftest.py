@@ -56,3 +56,11 @@ def records(store: Path) -> list[dict]:
     """Return the records of a store's log."""
     text = (store / "stackbound" / "verification.jsonl").read_text(encoding="utf-8")
     return [json.loads(line) for line in text.splitlines()]
+
+
+@pytest.fixture
+def here(tmp_path, monkeypatch):
+    """Work in an empty folder."""
+    monkeypatch.chdir(tmp_path)
+    monkeypatch.setenv("NO_COLOR", "1")
+    return tmp_path
