@@ -1,13 +1,12 @@
-"""Decode the tiles of a store with numpy alone.
+"""Decode the tiles of a store with numpy alone: ``python decode.py STORE TARGET.npy``.
 
 A copy of this file lies in every store beside ``DECODE.txt``, which describes the same bytes in words. It imports
 nothing of stackbound and nothing compiled, so that a store can be read when the program that wrote it can no longer
 be installed. It is slow (about a second for a million pixels) and meant for that day, and as a second opinion in the
 tests.
 
-``decode(payload, shape, dtype)`` returns the pixels of one inner chunk of the array. The chunks lie in shards as the
-Zarr specification of `sharding_indexed` lays down: at a shard's end an index of two little-endian uint64 per chunk,
-offset and length, and a CRC-32C of the index.
+``decode(payload, shape, dtype)`` returns the pixels of one inner chunk of the array, ``decode_store(store, target)``
+writes those of the whole array.
 """
 
 # This file stands alone: annotations are for readers, and numpy's own types would need casts everywhere.
@@ -15,8 +14,11 @@ offset and length, and a CRC-32C of the index.
 
 from __future__ import annotations
 
+import json
+import sys
 from itertools import product
 from math import cos, pi, prod, sqrt
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -25,6 +27,7 @@ from numpy.typing import NDArray
 VERSION = 1
 LENGTHS = (1, 2, 4, 8, 16, 32)
 WIDEST = 2**24 - 1
+MISSING = 2**64 - 1
 Shape = tuple[int, int, int]
 
 
@@ -625,6 +628,64 @@ class BandResiduals:
             raise DamagedError("the range coder does not end where it should")
 
 
+# --------------------------------------------------------------------------------------------------------------- store
+
+
+def decode_store(store: str | Path, target: str | Path) -> None:
+    """Write all pixels of a store's array to a new NPY file, axes in the store's order.
+
+    Raises
+    ------
+    DamagedError
+        A tile or the index of a shard is missing or damaged; names the shard.
+    FileExistsError
+        The target exists.
+    FileNotFoundError
+        A file of the store is missing.
+    """
+    folder = Path(store) / "0"
+    about = json.loads((folder / "zarr.json").read_text(encoding="utf-8"))
+    shape, dtype = tuple(about["shape"]), np.dtype(about["data_type"])
+    region = about["chunk_grid"]["configuration"]["chunk_shape"]
+    tile = about["codecs"][0]["configuration"]["chunk_shape"]
+    Path(target).touch(exist_ok=False)
+    try:
+        pixels = np.lib.format.open_memmap(target, "w+", dtype, shape)
+        for position in product(*(range(-(-length // step)) for length, step in zip(shape, region, strict=True))):
+            shard = folder.joinpath("c", *map(str, position))
+            try:
+                _place_tiles(pixels, shard.read_bytes(), position, region, tile)
+            except DamagedError as error:
+                raise DamagedError(f"{shard.relative_to(store).as_posix()}: {error}") from error
+        pixels.flush()
+    except BaseException:
+        Path(target).unlink()
+        raise
+
+
+def _place_tiles(pixels: Any, shard: bytes, position: Any, region: Any, tile: Any) -> None:
+    """Decode the tiles of a shard to their places.
+
+    A shard is laid down by the Zarr specification of `sharding_indexed`: at its end an index of two little-endian
+    uint64 a tile, offset and length, and the CRC-32C of the index. The last tiles of an axis may reach beyond it.
+    """
+    places = list(product(*(range(outer // inner) for outer, inner in zip(region, tile, strict=True))))
+    end = len(shard) - 4
+    begin = end - 16 * len(places)
+    if begin < 0 or crc32c(shard[begin:end]) != int.from_bytes(shard[end:], "little"):
+        raise DamagedError("the index of the shard is damaged")
+    index = np.frombuffer(shard[begin:end], "<u8").reshape(-1, 2).tolist()
+    for place, (offset, length) in zip(places, index, strict=True):
+        starts = [p * r + q * t for p, r, q, t in zip(position, region, place, tile, strict=True)]
+        inside = tuple(slice(a, min(a + t, n)) for a, t, n in zip(starts, tile, pixels.shape, strict=True))
+        if any(part.start >= part.stop for part in inside):
+            continue
+        if offset == MISSING:
+            raise DamagedError(f"the tile at {starts} is missing")
+        decoded = decode(shard[offset : offset + length], tuple(tile), pixels.dtype)
+        pixels[inside] = decoded[tuple(slice(part.stop - part.start) for part in inside)]
+
+
 # --------------------------------------------------------------------------------------------------------------- tile
 
 
@@ -782,3 +843,9 @@ def _crc_table() -> NDArray[np.uint32]:
 
 
 _TABLE = _crc_table()
+
+
+if __name__ == "__main__":
+    if len(sys.argv) != 3:
+        sys.exit(f"usage: python {Path(sys.argv[0]).name} STORE TARGET.npy")
+    decode_store(sys.argv[1], sys.argv[2])

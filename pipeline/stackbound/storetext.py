@@ -63,8 +63,8 @@ pip install stackbound zarr
 python -c "import zarr; print(zarr.open('PATH_OF_THIS_STORE')['0'].info)"
 Programs that read OME-Zarr 0.5 through zarr-python open it as soon as stackbound is installed beside them.
 One tile ({tile}) is decoded on its own; one shard file holds {region} pixels.
-Without stackbound: DECODE.txt beside this file says how the bytes are laid out, and decode.py decodes a tile with numpy
-alone."""
+Without stackbound: DECODE.txt beside this file says how the bytes are laid out, and decode.py decodes them with numpy
+alone: python decode.py PATH_OF_THIS_STORE TARGET.npy"""
 
 
 def _citing(store: Description) -> str:
